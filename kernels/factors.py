@@ -1,0 +1,296 @@
+"""From a summary to modes, singular values and the map from X to coefficients; order, signs, the next probe.
+
+Everything here is small against a block: matrices of m x k. Nothing is read again, and nothing is said about how
+accurate a mode is; the rounding floor is the one limit applied, because values under it are noise.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import scipy.linalg
+from numpy.typing import NDArray
+
+from .addressed import STREAM_PRIMED, signs
+from .blocks import Preparation
+from .checks import require_between, require_block, require_shape
+from .comoments import Summary
+from .comoments import keep_mean as with_mean_kept
+
+Floats = NDArray[np.float64]
+
+EPS = float(np.finfo(np.float64).eps)
+ROW_SPACE_FLOOR = 1e-13  # least eigenvalue of the scaled C that still counts as a direction, relative to the largest
+PEAK_SHARE = 0.9  # the first channel this close to the largest decides the sign
+
+
+@dataclass(frozen=True, eq=False)
+class Factors:
+    """The finished factorization ``A ~ U diag(S) V^T`` with ``S V^T = row_map X``.
+
+    Attributes
+    ----------
+    modes : float64 (m, k')
+        U, unit columns, in the units of the prepared matrix.
+    values : float64 (k',)
+        S, non-increasing, none below ``floor``.
+    row_map : float64 (k', k)
+        Coefficients are ``row_map`` times X; with the identity probe it is ``U^T``.
+    energy : float64 (m,)
+        Sum of squares of each channel, about the mean or about zero as asked for.
+    energy_total : float
+        Sum of ``energy``.
+    floor : float
+        Rounding floor of singular values.
+    n : int
+        Samples.
+    """
+
+    modes: Floats
+    values: Floats
+    row_map: Floats
+    energy: Floats
+    energy_total: float
+    floor: float
+    n: int
+
+
+def finish(summary: Summary, *, keep_mean: bool = False) -> Factors:
+    """Return all modes above the rounding floor.
+
+    The row space of X is the row space of the result: with ``P`` an orthonormal basis of it, ``A P P^T`` is found from
+    ``W = A X^T`` and ``C = X X^T`` alone (single-pass PCA of row streams, Yu, Gu, Li, Liu, Li, IJCAI 2017).
+
+    Parameters
+    ----------
+    summary : Summary
+    keep_mean : bool
+        Decompose about zero instead of about the mean.
+
+    Returns
+    -------
+    factors : Factors
+        Possibly without modes, if there is no energy.
+
+    Raises
+    ------
+    ValueError
+        The summary holds no samples.
+    """
+    require_between("summary.n", summary.n, 1)
+    floor = _floor(summary, keep_mean)
+    if keep_mean:
+        summary = with_mean_kept(summary)
+    finish_kind = _finish_identity if summary.shape.identity else _finish_probe
+    modes, values, row_map = finish_kind(summary)
+    order = np.argsort(-values, kind="stable")
+    order = order[values[order] > floor]
+    modes, row_map = orient(modes[:, order], row_map[order])
+    return Factors(
+        modes=modes,
+        values=values[order],
+        row_map=row_map,
+        energy=summary.energy.copy(),
+        energy_total=float(summary.energy.sum()),
+        floor=floor,
+        n=summary.n,
+    )
+
+
+def orient(modes: Floats, row_map: Floats) -> tuple[Floats, Floats]:
+    """Return modes and row map with signs such that the first channel near the peak is positive.
+
+    The first channel whose modulus is at least 0.9 of the largest decides, because the largest alone flips in half of
+    all noisy copies of an antisymmetric mode.
+
+    Parameters
+    ----------
+    modes : float64 (m, r)
+    row_map : float64 (r, k)
+        Flipped row by row together with the modes.
+    """
+    size = np.abs(modes)
+    first = (size >= PEAK_SHARE * size.max(axis=0, initial=0.0)).argmax(axis=0)
+    sign = np.where(modes[first, np.arange(modes.shape[1])] < 0, -1.0, 1.0)
+    return modes * sign, row_map * sign[:, np.newaxis]
+
+
+def coefficients(
+    factors: Factors,
+    rank: int,
+    x: NDArray[Any],
+    centre: Floats,
+    right_mean_x: Floats,
+    *,
+    keep_mean: bool = False,
+) -> Floats:
+    """Return the coefficients of one stored block.
+
+    Parameters
+    ----------
+    factors : Factors
+    rank : int
+        Leading modes wanted, at most as many as there are.
+    x : float32 or float64 (k, n)
+        Stored X of the block.
+    centre : float64 (k,)
+        Upsilon times the mean of the block.
+    right_mean_x : float64 (k,)
+        Upsilon times the mean of everything: ``summary.right_mean[shape.x]``.
+    keep_mean : bool
+        Coefficients about zero instead of about the mean; ``factors`` must have been finished so too.
+
+    Returns
+    -------
+    c : float64 (rank, n)
+    """
+    require_between("rank", rank, 0, factors.values.size)
+    require_block("x", x, factors.row_map.shape[1])
+    require_shape("centre", centre, (x.shape[0],))
+    offset = centre if keep_mean else centre - right_mean_x
+    rows = factors.row_map[:rank]
+    product: Floats = rows @ x.astype(np.float64, copy=False)
+    product += (rows @ offset)[:, np.newaxis]
+    return product
+
+
+def direct_coefficients(
+    factors: Factors,
+    rank: int,
+    raw: NDArray[Any],
+    preparation: Preparation,
+    mean: Floats,
+    *,
+    keep_mean: bool = False,
+) -> Floats:
+    """Return the coefficients of a raw block that is read again, as with the identity probe.
+
+    Parameters
+    ----------
+    factors : Factors
+    rank : int
+        Leading modes wanted, at most as many as there are.
+    raw : real (m, n)
+    preparation : Preparation
+    mean : float64 (m,)
+        ``summary.mean``; not subtracted with ``keep_mean``.
+
+    Returns
+    -------
+    c : float64 (rank, n)
+        ``U^T A``.
+    """
+    require_between("rank", rank, 0, factors.values.size)
+    require_shape("mean", mean, (factors.modes.shape[0],))
+    block = preparation.prepare(raw)
+    if not keep_mean:
+        block -= mean[:, np.newaxis]
+    product: Floats = factors.modes[:, :rank].T @ block
+    return product
+
+
+def captured_by_channel(factors: Factors, rank: int) -> Floats:
+    """Return the energy of each channel in the leading modes, float64 (m,): ``sum_i (U_ji S_i)^2``."""
+    require_between("rank", rank, 0, factors.values.size)
+    scaled = factors.modes[:, :rank] * factors.values[:rank]
+    captured: Floats = np.einsum("ij,ij->i", scaled, scaled)
+    return captured
+
+
+def next_width(k: int, rank: int) -> int:
+    """Return the most rows the probe of the next read can have after a read with k rows; see ``next_probe``."""
+    return k + 1 + _fresh_rows(k, rank)
+
+
+def next_probe(summary: Summary, rank: int, seed: int, pass_number: int, keys: NDArray[np.integer]) -> Floats:
+    """Return the frozen probe of the next read: the leading directions found so far, the mean, and new random rows.
+
+    The random rows keep the probe from being blind to what comes later; the directions alone missed a new pattern with
+    a seventh of the energy altogether. The direction of the mean gives the result that keeps the mean the accuracy of
+    the one that removes it. Entries are rounded to float32, so that they are exact in either precision.
+
+    Parameters
+    ----------
+    summary : Summary
+        Of the read before, before any background is removed.
+    rank : int
+        Modes wanted.
+    seed, pass_number : int
+        Address of the random rows; the first further read has pass number 2.
+    keys : 64-bit integers (m,)
+        Channel keys, ``addressed.name_keys``.
+
+    Returns
+    -------
+    rows : float64 (k2, m)
+        Unit rows: at most k directions, strongest first, the mean if there is one, and
+        ``max(14, rank, ceil(k / 3))`` rows of random signs.
+
+    Raises
+    ------
+    ValueError
+        The probe of the summary is the identity, which no read can improve.
+    """
+    shape = summary.shape
+    if shape.identity:
+        raise ValueError(f"summary: must not come from the identity probe, which is exact; got {shape}")
+    require_shape("keys", np.asarray(keys), (shape.m,))
+    random = signs(seed, STREAM_PRIMED + pass_number, keys, _fresh_rows(shape.k, rank)) / np.sqrt(shape.m)
+    length = float(np.linalg.norm(summary.mean))
+    mean = summary.mean[np.newaxis] / length if length > 0 else np.empty((0, shape.m))
+    rows = np.concatenate([_leading_directions(summary), mean, random])
+    return rows.astype(np.float32).astype(np.float64)
+
+
+def _fresh_rows(k: int, rank: int) -> int:
+    return max(14, rank, -(-k // 3))
+
+
+def _floor(summary: Summary, keep_mean: bool) -> float:
+    mean_square = float(summary.mean @ summary.mean)
+    energy = float(summary.energy.sum())
+    if keep_mean:
+        energy += summary.n * mean_square
+    return float(np.sqrt(EPS * energy + EPS**2 * summary.n * mean_square))
+
+
+def _finish_identity(summary: Summary) -> tuple[Floats, Floats, Floats]:
+    w = summary.outer[:, summary.shape.x]
+    squares, modes = scipy.linalg.eigh((w + w.T) / 2)
+    return modes, np.sqrt(np.maximum(squares, 0)), modes.T.copy()
+
+
+def _finish_probe(summary: Summary) -> tuple[Floats, Floats, Floats]:
+    x = summary.shape.x
+    to_basis = _row_space(summary.inner[x, x])
+    modes, values, v1t = scipy.linalg.svd(summary.outer[:, x] @ to_basis, full_matrices=False)
+    return modes, values, (values[:, np.newaxis] * v1t) @ to_basis.T
+
+
+def _row_space(c: Floats) -> Floats:
+    """Return ``d Q L^{-1/2}`` (k, l): right factor that makes the rows of X orthonormal, zero rows left out."""
+    d = _inverse_root_diagonal(c)
+    eigenvalues, q = scipy.linalg.eigh(d[:, np.newaxis] * c * d)
+    strong = eigenvalues > ROW_SPACE_FLOOR * max(float(eigenvalues[-1]), 0.0)
+    basis: Floats = d[:, np.newaxis] * q[:, strong] / np.sqrt(eigenvalues[strong])
+    return basis
+
+
+def _inverse_root_diagonal(c: Floats) -> Floats:
+    diagonal = np.diagonal(c)
+    inverse: Floats = np.zeros_like(diagonal)
+    live = diagonal > 0
+    inverse[live] = 1 / np.sqrt(diagonal[live])
+    return inverse
+
+
+def _leading_directions(summary: Summary) -> Floats:
+    """Return orthonormal rows that span the scaled W, strongest first, by pivoted QR."""
+    x = summary.shape.x
+    scaled = summary.outer[:, x] * _inverse_root_diagonal(summary.inner[x, x])
+    q, r, _ = scipy.linalg.qr(scaled, mode="economic", pivoting=True)
+    size = np.abs(np.diagonal(r))
+    directions: Floats = np.asarray(q[:, size > EPS * size.max(initial=0.0)].T, dtype=np.float64)
+    return directions

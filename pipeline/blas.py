@@ -1,0 +1,46 @@
+"""The linear algebra library underneath: which kernel it runs, and one thread per task.
+
+The bits of a product depend on the kernel and on the number of threads, so both are facts that a dossier stores.
+The only importer of threadpoolctl.
+"""
+
+from __future__ import annotations
+
+import os
+from contextlib import AbstractContextManager
+
+from threadpoolctl import threadpool_info, threadpool_limits
+
+from shardfold.errors import ClusterFailed
+
+CORE_VARIABLE = "OPENBLAS_CORETYPE"
+
+
+def core_type() -> str:
+    """Return the names of the BLAS kernels of this process, such as ``Haswell``; more than one is joined by ``+``."""
+    names = {str(i.get("architecture") or i["internal_api"]) for i in threadpool_info() if i["user_api"] == "blas"}
+    return "+".join(sorted(names)) or "unknown"
+
+
+def one_thread() -> AbstractContextManager[object]:
+    """Return a context in which BLAS uses one thread, so that sums have one order."""
+    return threadpool_limits(1, user_api="blas")
+
+
+def check_core(pinned: str) -> None:
+    """Check that this process runs the kernel that the design pins.
+
+    Raises
+    ------
+    ClusterFailed
+        If it runs another one.
+    """
+    running = core_type()
+    if pinned not in ("any", running):
+        raise ClusterFailed(
+            "this process runs another BLAS kernel than the design pins",
+            where=f"process {os.getpid()}",
+            rule=f"design.blas: {pinned}",
+            got=running,
+            remedy=f"start with {CORE_VARIABLE}={pinned} in the environment of every node",
+        )

@@ -1,0 +1,190 @@
+"""Opening a dossier: its design is created once, or compared with what the job asks.
+
+After this the design and the channel table are what storage says, whatever the job said. No reading of measured
+values, no tasks.
+"""
+
+from __future__ import annotations
+
+import io
+import json
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from shardfold import layout
+from shardfold.channels import ChannelTable, default_table, read_table, to_arrow, units_conflict
+from shardfold.design import Design, compare, resolve
+from shardfold.errors import InputError, RecordCorrupt
+from shardfold.ids import canonical_json, digest_bytes, digest_value
+from shardfold.inventory import Inventory, choose_channels
+from shardfold.job import Job
+from shardfold.kernels.addressed import STREAM_PROBE, name_keys, signs
+from shardfold.store import Created, Store, StoreSettings, connect
+from shardfold.tables import arrow_bytes
+
+
+@dataclass(frozen=True)
+class Dossier:
+    """An open dossier: where it is, its design and its channel table."""
+
+    store: Store
+    design: Design
+    table: ChannelTable
+
+
+def load(store: Store) -> Dossier | None:
+    """Return the stored dossier, or ``None`` where there is none.
+
+    Raises
+    ------
+    RecordCorrupt
+        If the design cannot be read, or the table is not the one it names.
+    """
+    if store.head(layout.DESIGN) is None:
+        return None
+    try:
+        design = Design.from_record(json.loads(bytes(store.read(layout.DESIGN))))
+    except (ValueError, KeyError, TypeError) as error:
+        raise _corrupt(layout.DESIGN, f"a design of format 1 ({type(error).__name__}: {error})") from error
+    data = bytes(store.read(layout.channels_key(1)))
+    if digest_bytes(data) != design.table_digest:
+        raise _corrupt(layout.channels_key(1), f"digest {design.table_digest}, got {digest_bytes(data)}")
+    return Dossier(store, design, read_table(data, layout.channels_key(1)))
+
+
+def open_dossier(job: Job, store: Store, inventory: Inventory, table: ChannelTable | None) -> Dossier:
+    """Return the dossier of a job, created if it does not exist.
+
+    Parameters
+    ----------
+    job : Job
+        The settings.
+    store : Store
+        The dossier's place.
+    inventory : Inventory
+        Decides ``auto`` values and channels at creation.
+    table : ChannelTable or None
+        The job's channel table, read.
+
+    Raises
+    ------
+    DesignDiffers
+        If the dossier exists with another design.
+    """
+    request = channel_request(job, table)
+    stored = load(store)
+    if stored is None:
+        wanted = propose(job, store, inventory, table)
+        stored = create(wanted)
+    compare(stored.design, job, request, inventory.listed_bytes)
+    return stored
+
+
+def propose(job: Job, store: Store, inventory: Inventory, table: ChannelTable | None) -> Dossier:
+    """Return the dossier that a job would create, writing nothing.
+
+    Raises
+    ------
+    InputError
+        If the channels have two units without a scale.
+    """
+    names = choose_channels(inventory, job.source.channels, table)
+    chosen = table.select(names) if table is not None else default_table(names)
+    _check_units(job, chosen)
+    if job.design.scale == "none":
+        chosen = replace(chosen, scale=np.ones(len(names)))
+    design = resolve(job, inventory.shards, channel_request(job, table), len(names))
+    return Dossier(store, replace(design, table_digest=digest_bytes(table_bytes(chosen))), chosen)
+
+
+def create(wanted: Dossier) -> Dossier:
+    """Write a new dossier's table, probe and, last, its design; return what is stored then.
+
+    Another writer that was faster wins: its design is returned.
+    """
+    store, design = wanted.store, wanted.design
+    store.check_writable()
+    _lay_down(store, layout.channels_key(1), table_bytes(wanted.table))
+    if not design.identity:
+        rows = signs(design.seed, STREAM_PROBE, name_keys(wanted.table.names), design.width)
+        _lay_down(store, layout.probe_key(1), npy_bytes(rows))
+    if store.create(layout.DESIGN, canonical_json(design.record())) is not Created.LANDED:
+        stored = load(store)
+        if stored is not None:
+            return stored
+    return wanted
+
+
+def channel_request(job: Job, table: ChannelTable | None) -> str:
+    """Return the digest of what the job says of channels, for comparing without an inventory."""
+    content = None if table is None else digest_bytes(table_bytes(table))
+    return digest_value([job.source.channels.include, job.source.channels.exclude, content])
+
+
+def load_job_table(job: Job) -> ChannelTable | None:
+    """Return the channel table the job names, or ``None``."""
+    name = job.source.channels.table
+    if name is None:
+        return None
+    folder, _, key = name.rpartition("/")
+    storage = job.source.storage
+    data = connect(StoreSettings(folder or "/", storage.endpoint, storage.region, storage.anonymous)).read(key)
+    return read_table(bytes(data), name)
+
+
+def table_bytes(table: ChannelTable) -> bytes:
+    """Return a channel table as it is stored."""
+    return arrow_bytes(to_arrow(table))
+
+
+def npy_bytes(rows: np.ndarray[Any, Any]) -> bytes:
+    """Return an array as the bytes of a ``.npy`` file."""
+    sink = io.BytesIO()
+    np.save(sink, rows, allow_pickle=False)
+    return sink.getvalue()
+
+
+def probe_facts(store: Store, design: Design, read: int) -> tuple[int, str] | None:
+    """Return rows and digest of the frozen probe of a read, or ``None`` where it is not made yet."""
+    if design.identity:
+        return design.channels, "identity"
+    if store.head(layout.probe_key(read)) is None:
+        return None
+    data = store.read(layout.probe_key(read))
+    return int(np.load(io.BytesIO(data), allow_pickle=False).shape[0]), digest_bytes(data)
+
+
+def local_folder(location: str) -> Path | None:
+    """Return the folder of a local location, or ``None`` for an object store."""
+    return None if "://" in location and not location.startswith("file://") else Path(location.removeprefix("file://"))
+
+
+def _lay_down(store: Store, key: str, data: bytes) -> None:
+    """Create an object of a dossier that has no design yet; what a creation that was killed left there is replaced."""
+    if store.create(key, data) is not Created.LANDED and bytes(store.read(key)) != data:
+        store.put(key, data)
+
+
+def _check_units(job: Job, table: ChannelTable) -> None:
+    pair = units_conflict(table)
+    if pair is None or job.design.mixed_units or job.design.scale == "table":
+        return
+    raise InputError(
+        "the channels have more than one unit, so energy would depend on the choice of units",
+        where=str(job.source.channels.table),
+        rule="one unit, or a scale per channel",
+        got=" and ".join(repr(unit) for unit in pair),
+        remedy="design.scale: table with a scale column, one dossier per unit, or design.mixed_units: true",
+    )
+
+
+def _corrupt(key: str, rule: str) -> RecordCorrupt:
+    return RecordCorrupt(
+        "the dossier is not as it was written",
+        where=key,
+        rule=rule,
+        remedy="restore the object from a copy; a dossier without its design cannot be continued",
+    )

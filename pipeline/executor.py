@@ -1,0 +1,49 @@
+"""The executor's promises, and the serial one that is the oracle for every other.
+
+Promises: every task is performed at least once and reported exactly once, in any order; an outcome never depends on
+which worker made it; at most a few tasks are in flight per worker, so memory does not grow with the campaign; the
+first error that is not a refused shard ends the stage, and nothing half-done is visible in storage then.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from typing import Protocol
+
+from shardfold.tasks import Outcome, Task, Workplace, perform
+
+
+class Executor(Protocol):
+    """Performs tasks."""
+
+    workers: int
+
+    def perform(self, workplace: Workplace, tasks: Sequence[Task]) -> Iterator[tuple[Task, Outcome]]:
+        """Yield each task with its outcome as it is done; refused shards are outcomes, other errors are raised."""
+        ...
+
+    def nodes(self) -> int:
+        """Return on how many machines the workers are."""
+        ...
+
+    def close(self) -> None:
+        """Give back what the executor holds. Idempotent."""
+        ...
+
+
+class SerialExecutor:
+    """Performs tasks one after the other in this process."""
+
+    workers = 1
+
+    def perform(self, workplace: Workplace, tasks: Sequence[Task]) -> Iterator[tuple[Task, Outcome]]:
+        """Yield each task with its outcome, in order."""
+        for task in tasks:
+            yield task, perform(workplace, task)
+
+    def nodes(self) -> int:
+        """Return 1: this machine."""
+        return 1
+
+    def close(self) -> None:
+        """Do nothing; no resources are held."""

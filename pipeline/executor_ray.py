@@ -1,0 +1,150 @@
+"""The executor on Ray: bounded back-pressure, retries for lost workers, a stall limit. The only importer of ray.
+
+Workers get a task and the workplace, both small; everything large goes through storage, so losing a node loses no
+work that was stored. Credentials reach workers by the environment of their node, never inside a task.
+"""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Iterator, Sequence
+from pathlib import Path
+from typing import Any
+
+os.environ.setdefault("RAY_USAGE_STATS_ENABLED", "0")
+os.environ.setdefault("RAY_ACCEL_ENV_VAR_OVERRIDE_ON_ZERO", "0")
+
+import ray
+
+from shardfold.blas import CORE_VARIABLE
+from shardfold.budget import OBJECT_STORE_BYTES
+from shardfold.errors import ClusterFailed, ShardfoldError
+from shardfold.tasks import Outcome, Task, Workplace, perform
+
+STALL_SECONDS = 1800.0
+LOST_WORKER_RETRIES = 3
+
+
+class RayExecutor:
+    """Performs tasks on a Ray cluster, or on a local Ray that it starts and ends itself.
+
+    Parameters
+    ----------
+    workers : int or None
+        Tasks at once; ``None`` takes all CPUs of the cluster.
+    address : str or None
+        Address of a running cluster; ``None`` uses ``RAY_ADDRESS`` if set, else a local Ray.
+    blas : str
+        ``any``, or the kernel that every worker must run.
+
+    Raises
+    ------
+    ClusterFailed
+        If Ray cannot be started or reached.
+    """
+
+    def __init__(self, workers: int | None, address: str | None, blas: str = "any") -> None:
+        self._owns = not ray.is_initialized()
+        if self._owns:
+            _start(workers, address)
+        cpus = int(ray.cluster_resources().get("CPU", 1))
+        self.workers = min(workers, cpus) if workers else cpus
+        variables = {} if blas == "any" else {"env_vars": {CORE_VARIABLE: blas}}
+        self._remote = ray.remote(
+            num_cpus=1, max_retries=LOST_WORKER_RETRIES, retry_exceptions=False, runtime_env=variables or None
+        )(perform)
+
+    def perform(self, workplace: Workplace, tasks: Sequence[Task]) -> Iterator[tuple[Task, Outcome]]:
+        """Yield each task with its outcome as it is done.
+
+        Raises
+        ------
+        ClusterFailed
+            If a worker is lost more often than allowed, or nothing ends for a long time.
+        """
+        shared = ray.put(workplace)
+        waiting = iter(tasks)
+        flying: dict[Any, Task] = {}
+        try:
+            while True:
+                while len(flying) < self.workers + 1 and (task := next(waiting, None)) is not None:
+                    flying[self._remote.remote(shared, task)] = task
+                if not flying:
+                    return
+                done, _ = ray.wait(list(flying), num_returns=1, timeout=STALL_SECONDS, fetch_local=False)
+                if not done:
+                    raise _stalled(len(flying))
+                yield flying.pop(done[0]), _get(done[0])
+        finally:
+            for reference in flying:
+                ray.cancel(reference, force=False)
+
+    def nodes(self) -> int:
+        """Return the number of live nodes."""
+        return sum(1 for node in ray.nodes() if node["Alive"])
+
+    def sees_on_every_node(self, path: Path) -> bool:
+        """Return whether a task on each live node finds the file, as a shared folder must."""
+        look = ray.remote(num_cpus=0)(os.path.exists)
+        pin = ray.util.scheduling_strategies.NodeAffinitySchedulingStrategy
+        ids = [node["NodeID"] for node in ray.nodes() if node["Alive"]]
+        return all(ray.get([look.options(scheduling_strategy=pin(i, soft=False)).remote(str(path)) for i in ids]))
+
+    def close(self) -> None:
+        """End the local Ray, or leave the cluster."""
+        if self._owns and ray.is_initialized():
+            ray.shutdown()
+
+
+def _start(workers: int | None, address: str | None) -> None:
+    options: dict[str, Any] = {"logging_level": "ERROR", "log_to_driver": False}
+    address = address or os.environ.get("RAY_ADDRESS")
+    if address:
+        options["address"] = address
+    else:
+        os.environ.setdefault("RAY_task_oom_retries", "3")
+        options |= {
+            "address": "local",
+            "num_cpus": workers,
+            "include_dashboard": False,
+            "object_store_memory": OBJECT_STORE_BYTES,
+        }
+    try:
+        ray.init(**options)
+    except (ConnectionError, RuntimeError, ValueError, TimeoutError) as error:
+        raise ClusterFailed(
+            "Ray could not be reached" if address else "a local Ray could not be started",
+            where="engine.address",
+            rule="a running Ray cluster of this Ray version, or nothing for a local one",
+            got=f"{address or 'local'}: {str(error).splitlines()[0]}",
+            remedy="check the address, or run with --set engine.workers=serial",
+        ) from error
+
+
+def _get(reference: Any) -> Outcome:
+    try:
+        outcome: Outcome = ray.get(reference)
+    except ray.exceptions.RayTaskError as error:
+        cause = error.cause
+        if isinstance(cause, ShardfoldError):
+            raise cause from None
+        raise
+    except ray.exceptions.RayError as error:
+        raise ClusterFailed(
+            "a worker was lost more often than allowed",
+            where="Ray",
+            rule=f"{LOST_WORKER_RETRIES} retries of a task whose worker dies",
+            got=f"{type(error).__name__}: {str(error).strip().splitlines()[0]}",
+            remedy="look for lack of memory on the nodes (engine.memory, engine.workers), then run again",
+        ) from error
+    return outcome
+
+
+def _stalled(flying: int) -> ClusterFailed:
+    return ClusterFailed(
+        "nothing has ended for a long time",
+        where="Ray",
+        rule=f"one task ends within {STALL_SECONDS:g} s",
+        got=f"{flying} tasks in flight",
+        remedy="see that the cluster has free CPUs and that its nodes answer, then run again",
+    )

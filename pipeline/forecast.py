@@ -1,0 +1,159 @@
+"""What a run would do, said before it does it: reads, work, memory, storage, seconds. No measured value is read."""
+
+from __future__ import annotations
+
+import time
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from shardfold import budget, dossier, layout
+from shardfold.blas import core_type, one_thread
+from shardfold.events import Listener
+from shardfold.job import Job
+from shardfold.kernels import cost
+from shardfold.kernels.whole import Shape
+from shardfold.plan import Cell, bytes_to_read, cut, tree
+from shardfold.run import reads_of
+from shardfold.site import Site, look
+from shardfold.sums import leaf_names
+
+FOOTERS_READ = 200
+ASSUMED_BYTES_PER_SECOND = 100e6
+"""Read rate of one worker that seconds are forecast with; the forecast says so."""
+
+
+@dataclass(frozen=True)
+class Forecast:
+    """A forecast as plain values, for people and for ``--json``."""
+
+    figures: dict[str, Any]
+    refused: str = ""
+
+
+def forecast(job: Job, workers: int, listen: Listener) -> Forecast:
+    """Return what `run` would do for a job.
+
+    Parameters
+    ----------
+    job : Job
+        The settings.
+    workers : int
+        Workers it would have.
+    listen : Listener
+        Told what was found.
+    """
+    site = look(job, listen, write=False, sample=FOOTERS_READ)
+    design = site.dossier.design
+    shape = design.shape(1, design.width)
+    facts = dossier.probe_facts(site.dossier.store, design, 1) if site.exists else None
+    cutting = cut(list(site.shards.values()), design, 1, shape, facts[1] if facts else "")
+    cells = cutting.cells
+    stored = _stored(site) if site.exists else set()
+    reads = reads_of(job, design)
+    serial = job.engine.workers == "serial"
+    memory = budget.budget(design, shape, cells, job.modes.rank, 1 if serial else workers, serial)
+    limit = job.engine.memory_bytes
+    figures = {
+        "campaign": job.campaign,
+        "shards": _shards(site),
+        "samples": sum(shard.rows for shard in site.shards.values()),
+        "channels": design.channels,
+        "span": _span(site),
+        "summary": _summary(design.identity, design.width, design.channels),
+        "leaf": f"{design.leaf_ns / 1e9:g} s" if design.timed else f"{1 << design.leaf_bits} by hash of the name",
+        "cells": {"all": len(cells), "stored": sum(cell.name in stored for cell in cells)},
+        "reads": _reads(cells, stored, reads, design.identity),
+        "work": _work(shape, cells, stored, reads, workers),
+        "memory": _memory(memory, limit),
+        "storage_bytes": _storage(shape, cells, reads, design.kernel),
+        "dossier": "exists" if site.exists else "would be created",
+        "blas": core_type(),
+    }
+    refusal = ""
+    if memory.worker_bytes > limit:
+        refusal = f"the plan needs {memory.worker_bytes} bytes per worker; engine.memory is {limit}"
+    return Forecast(figures, refusal)
+
+
+def _stored(site: Site) -> set[str]:
+    found = (layout.parse_cell(info.key) for info in site.dossier.store.list(f"{layout.LEAVES}01/"))
+    return {parsed[2] for parsed in found if parsed is not None}
+
+
+def _shards(site: Site) -> dict[str, Any]:
+    inventory = site.inventory
+    return {
+        "to_take_in": len(site.shards),
+        "left_for_later": len(inventory.unsettled),
+        "refused": {key: entry.why.get("what", "") for key, entry in sorted(site.standing.items())},
+        "not_listed_any_more": len(site.absent),
+        "footers_read": "sampled" if inventory.sampled else "all",
+    }
+
+
+def _span(site: Site) -> list[str] | None:
+    firsts = [shard.first for shard in site.shards.values() if shard.first is not None]
+    lasts = [shard.last for shard in site.shards.values() if shard.last is not None]
+    if not firsts:
+        return None
+    return [f"{np.datetime64(value, 'ns')}Z" for value in (min(firsts), max(lasts))]
+
+
+def _summary(identity: bool, width: int, channels: int) -> str:
+    if identity:
+        return f"whole, identity probe: {channels} channels are few enough; coefficients are read again"
+    return f"whole, probe of {width} rows: every shard holds all channels of its samples"
+
+
+def _reads(cells: tuple[Cell, ...], stored: set[str], reads: int, identity: bool) -> dict[str, Any]:
+    once = sum(cell.stored_bytes for cell in cells)
+    return {
+        "passes": reads,
+        "bytes_first": bytes_to_read(cells, stored),
+        "bytes_further": once * (reads - 1),
+        "bytes_for_coefficients": once if identity else 0,
+    }
+
+
+def _work(shape: Shape, cells: tuple[Cell, ...], stored: set[str], reads: int, workers: int) -> dict[str, Any]:
+    rows = sum(cell.rows for cell in cells if cell.name not in stored)
+    flops = cost.fold_flops(shape, rows) * reads
+    data = sum(cell.stored_bytes for cell in cells if cell.name not in stored) * reads
+    seconds = (flops / _flops_per_second() + data / ASSUMED_BYTES_PER_SECOND) / workers
+    return {
+        "flops": flops,
+        "workers": workers,
+        "seconds_about": round(seconds, 1),
+        "assumed_read_rate": f"{ASSUMED_BYTES_PER_SECOND / 1e6:g} MB/s per worker",
+    }
+
+
+def _memory(memory: budget.Budget, limit: int) -> dict[str, Any]:
+    return {
+        "worker_bytes": memory.worker_bytes,
+        "worker_limit_bytes": limit,
+        "worker_terms": {phase: dict(terms) for phase, terms in memory.phases.items()},
+        "driver_bytes": memory.driver_bytes,
+        "object_store_bytes": memory.object_store_bytes,
+        "node_bytes": memory.node_bytes,
+    }
+
+
+def _storage(shape: Shape, cells: tuple[Cell, ...], reads: int, kernel: int) -> int:
+    sums = sum(len(nodes) for nodes in tree(1, leaf_names(cells), kernel)) if cells else 0
+    x_bytes = 0 if shape.identity else sum(cell.rows * shape.k * min(8, cell.dtype.itemsize) for cell in cells)
+    return reads * ((len(cells) + sums) * cost.summary_bytes(shape) + x_bytes)
+
+
+def _flops_per_second() -> float:
+    """Measure one float64 product of about 20 milliseconds."""
+    rng_free = np.ones((512, 2048)), np.ones((2048, 96))
+    with one_thread():
+        begin = time.perf_counter()
+        for _ in range(3):
+            rng_free[0] @ rng_free[1]
+        return 3 * 2.0 * 512 * 2048 * 96 / (time.perf_counter() - begin)
+
+

@@ -1,0 +1,117 @@
+"""Locations: what a written location means, whether one lies inside another, and which keys a pattern lists.
+
+Text in, text out; no store is asked and no file is touched but to resolve symbolic links in a local path.
+"""
+
+from __future__ import annotations
+
+import re
+from pathlib import Path
+from urllib.parse import urlsplit
+
+from shardfold.quantities import RuleBroken
+
+_SCHEME = re.compile(r"([A-Za-z][A-Za-z0-9+.-]*)://")
+_SLIP = re.compile(r"(s3a?|gs|https?|file|memory|az|abfs)(:/?)(?=[^/]|$)", re.IGNORECASE)
+_S3_LIKE = {"s3a", "s3n"}
+
+
+def is_url(location: str) -> bool:
+    """Return whether a location names a scheme; all else is a local path."""
+    return _SCHEME.match(location) is not None
+
+
+def is_local(location: str) -> bool:
+    """Return whether a location is on the local file system."""
+    return not is_url(location)
+
+
+def resolve(written: str, folder: Path) -> str:
+    """Return a location in its one form: URLs without a closing slash, local paths absolute.
+
+    Parameters
+    ----------
+    written : str
+        As the job has it.
+    folder : Path
+        Folder of the job file; relative local paths start there.
+
+    Raises
+    ------
+    RuleBroken
+        If it is empty, a misspelt URL, or holds something that is not expanded here.
+    """
+    text = written.strip()
+    if not text:
+        raise RuleBroken("must name a location", "write s3://bucket/folder/ or a local path")
+    if "${" in text or "{{" in text:
+        raise RuleBroken("must be written out: nothing is expanded inside a job", "use --set KEY=VALUE for what changes")
+    if slip := _SLIP.match(text):
+        raise RuleBroken("must have two slashes after the colon of a URL", f'write "{slip[1].lower()}://..."')
+    if not is_url(text):
+        return str((folder / Path(text).expanduser()).resolve())
+    return _resolved_url(text)
+
+
+def inside(inner: str, outer: str) -> str | None:
+    """Return the key of one location within another ("" if they are the same), ``None`` if it is not inside."""
+    below, above = inner.rstrip("/") + "/", outer.rstrip("/") + "/"
+    return below[len(above) :].strip("/") if below.startswith(above) else None
+
+
+def pattern_regex(pattern: str) -> re.Pattern[str]:
+    """Return the regular expression of a pattern over keys.
+
+    ``**/`` is any number of folders, also none; ``*`` and ``?`` stay within one name; ``[abc]``, ``[!abc]`` as usual.
+    """
+    return re.compile("".join(_regex_part(part) for part in re.findall(r"\*\*/|\*\*|\[!?\]?[^\]]*\]|.", pattern, re.DOTALL)))
+
+
+def _regex_part(part: str) -> str:
+    known = {"**/": "(?:[^/]+/)*", "**": ".*", "*": "[^/]*", "?": "[^/]"}
+    if part in known:
+        return known[part]
+    if len(part) > 2 and part[0] == "[":
+        body = part[1:-1].replace("\\", "\\\\").replace("[", "\\[")
+        return f"[^/{body[1:]}]" if body[0] == "!" else f"[{body}]"
+    return re.escape(part)
+
+
+def _resolved_url(text: str) -> str:
+    scheme, rest = text.split("://", 1)
+    scheme = scheme.lower()
+    if scheme in _S3_LIKE:
+        raise RuleBroken("must be one of the known kinds of location", f'write "s3://{rest}"')
+    if scheme == "file":
+        if not rest.startswith("/"):
+            raise RuleBroken("must be an absolute path after file://", "write the path alone")
+        return str(Path(rest).resolve())
+    if scheme == "s3" and not re.match(r"[A-Za-z0-9][\w.-]+(/|$)", rest):
+        raise RuleBroken("must name a bucket after s3://", "write s3://bucket/folder/")
+    return f"{scheme}://{rest.rstrip('/') if scheme == 's3' else rest}"
+
+
+def parse_endpoint(value: object) -> str:
+    """Return the address of an S3 service in its one form: http or https, host, perhaps a port, nothing more.
+
+    Raises
+    ------
+    RuleBroken
+        If it is anything else.
+    """
+    rule = "must be the address of an S3 service: http:// or https://, a host, perhaps a port"
+    text = value.strip() if isinstance(value, str) else ""
+    if not re.match(r"https?://", text, re.IGNORECASE):
+        example = f'write "http://{text}"' if re.fullmatch(r"[\w.-]+(:\d+)?", text) else 'such as "http://127.0.0.1:9000"'
+        raise RuleBroken(rule, example)
+    try:
+        parts = urlsplit(text)
+        port = f":{parts.port}" if parts.port is not None else ""
+    except ValueError:
+        raise RuleBroken(rule, "the port must be a number up to 65535") from None
+    if parts.path.strip("/") or parts.query or parts.fragment:
+        raise RuleBroken(rule, "leave out what follows the host; bucket and folder belong into location")
+    if not parts.hostname:
+        raise RuleBroken(rule, "the host is missing")
+    host = f"[{parts.hostname}]" if ":" in parts.hostname else parts.hostname
+    return f"{parts.scheme.lower()}://{host}{port}"

