@@ -93,7 +93,7 @@ class Summary:
     inner : float64 (s, s)
         ``R R^T``, centred: C and all other products of the stack.
     right_mean : float64 (s,)
-        Mean of the stack: Upsilon mean, Theta mean, xi / n, mean of G.
+        Mean of the stack: Upsilon mean (with the rounding of the stored X), Theta mean, xi / n, mean of G.
     low, high : float64 (m,)
         Least and largest value of each channel in channel units (after gain and shift, before the factor).
     gaps : int64 (m,)

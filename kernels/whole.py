@@ -74,7 +74,7 @@ class XBlock:
     x : float32 or float64 (k, n)
         Upsilon times the centred block.
     centre : float64 (k,)
-        Upsilon times the block's mean.
+        Upsilon times the block's mean: what the centring took from X.
     """
 
     x: NDArray[Any]
@@ -138,7 +138,7 @@ def fold_block(
         summary.inner[shape.x, :], summary.inner[:, shape.x] = summary.outer, summary.outer.T
     summary.energy += facts.energy + step * step
     advance(summary, raw.shape[1], facts.mean, facts.right_mean, *_range(facts, preparation))
-    return None if facts.x is None else XBlock(x=facts.x, centre=facts.right_mean[shape.x].copy())
+    return None if facts.x is None else XBlock(x=facts.x, centre=facts.centre)
 
 
 @dataclass(eq=False)
@@ -146,6 +146,7 @@ class _Facts:
     """What the first sweep learns about a block; in raw units where the name says so."""
 
     x: NDArray[Any] | None
+    centre: Floats
     stack: Floats  # (s, n + 1): the last sample is the difference of means
     mean: Floats
     right_mean: Floats
@@ -224,6 +225,7 @@ def _first_sweep(shape: Shape, raw: NDArray[Any], preparation: Preparation, prob
     mean, energy, mean_raw, low_raw, high_raw = np.empty((5, m))
     facts = _Facts(
         x=None if x is None else x.x,
+        centre=np.zeros(shape.k),
         stack=np.zeros((shape.s, n + 1)),
         mean=mean,
         right_mean=np.zeros(shape.s),
@@ -244,7 +246,7 @@ def _first_sweep(shape: Shape, raw: NDArray[Any], preparation: Preparation, prob
             facts.stack[rows, :n], facts.right_mean[rows] = group, mean[rows]
         else:
             x.add(probe.rows[:, rows], group)
-            facts.right_mean[shape.x] += probe.rows[:, rows].astype(np.float64) @ mean[rows]
+            facts.centre += probe.rows[:, rows].astype(np.float64) @ mean[rows]
     return facts
 
 
@@ -263,7 +265,11 @@ def _squares_by_channel(group: Floats, sample_major: bool) -> Floats:
 def _fill_stack(facts: _Facts, shape: Shape, sample_checks: Floats, background: Floats) -> None:
     n = facts.stack.shape[1] - 1
     if facts.x is not None:
-        facts.stack[shape.x, :n] = facts.x
+        # Rounding leaves the stored X a mean of its own. Counted as mean, all products are those of the stored X; left
+        # alone, a drift between float32 blocks keeps coefficients from being orthogonal beyond 1e-3 (with it: 1e-9).
+        rest = facts.x.mean(axis=1, dtype=np.float64)
+        np.subtract(facts.x, rest[:, np.newaxis], out=facts.stack[shape.x, :n])
+        facts.right_mean[shape.x] = facts.centre + rest
     for place, values in ((shape.xi, sample_checks), (shape.g, background)):
         facts.right_mean[place] = values.mean(axis=1)
         np.subtract(values, facts.right_mean[place, np.newaxis], out=facts.stack[place, :n])

@@ -142,7 +142,7 @@ def read_array(store: Readable, key: str, header: Header, name: str) -> Array:
 def digest_array(array: Array) -> str:
     """Return the XXH3-128 digest of an array's elements in memory order."""
     flat = array.T if _fortran(array) else np.ascontiguousarray(array)
-    return xxhash.xxh3_128_hexdigest(memoryview(flat).cast("B") if flat.size else b"")
+    return xxhash.xxh3_128_hexdigest(memoryview(flat.data).cast("B") if flat.size else b"")
 
 
 def _fortran(array: Array) -> bool:

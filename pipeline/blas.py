@@ -7,7 +7,8 @@ The only importer of threadpoolctl.
 from __future__ import annotations
 
 import os
-from contextlib import AbstractContextManager
+from collections.abc import Iterator
+from contextlib import contextmanager
 
 from threadpoolctl import threadpool_info, threadpool_limits
 
@@ -22,9 +23,11 @@ def core_type() -> str:
     return "+".join(sorted(names)) or "unknown"
 
 
-def one_thread() -> AbstractContextManager[object]:
-    """Return a context in which BLAS uses one thread, so that sums have one order."""
-    return threadpool_limits(1, user_api="blas")
+@contextmanager
+def one_thread() -> Iterator[None]:
+    """Let BLAS use one thread within the context, so that sums have one order."""
+    with threadpool_limits(1, user_api="blas"):
+        yield
 
 
 def check_core(pinned: str) -> None:

@@ -18,6 +18,7 @@ import pyarrow as pa
 import pyarrow.csv as pa_csv
 import pyarrow.parquet as pq
 from numpy.typing import NDArray
+
 from shardfold.errors import JobInvalid
 
 Floats = NDArray[np.float64]
@@ -213,7 +214,7 @@ def _numbers(table: pa.Table, column: str) -> Floats | None:
 
 def _units(table: pa.Table) -> tuple[str, ...]:
     if "unit" not in table.column_names:
-        return ("",) * table.num_rows
+        return ("",) * int(table.num_rows)
     values = table.column("unit").to_pylist()
     return tuple("" if value is None else str(value) for value in values)
 

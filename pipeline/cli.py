@@ -253,25 +253,29 @@ def _print_closeness(rows: Any) -> None:
 
 def _print_forecast(f: dict[str, Any]) -> None:
     reads, memory, work, shards = f["reads"], f["memory"], f["work"], f["shards"]
-    lines = [
-        ("campaign", f"{f['campaign']}: {shards['to_take_in']:,} shards, {f['samples']:,} samples, "
-                     f"{f['channels']:,} channels; footers read: {shards['footers_read']}"),
-        ("span", " to ".join(f["span"]) if f["span"] else "no times"),
-        ("left", f"{shards['left_for_later']} too young, {len(shards['refused'])} refused, "
-                 f"{shards['not_listed_any_more']} kept though no longer listed"),
-        ("summary", f["summary"]),
-        ("leaf", f"{f['leaf']}; {f['cells']['all']:,} cells, {f['cells']['stored']:,} of them stored"),
-        ("reads", f"{reads['passes']} pass(es): {reads['bytes_first'] / MIB:,.1f} MiB now, "
-                  f"{(reads['bytes_further'] + reads['bytes_for_coefficients']) / MIB:,.1f} MiB again"),
-        ("work", f"{work['flops']:.3g} flops, about {work['seconds_about']:,} s with {work['workers']} worker(s) "
-                 f"({work['assumed_read_rate']} assumed; start-up apart)"),
-        ("memory", f"{memory['worker_bytes'] / MIB:,.0f} MiB per worker (limit {memory['worker_limit_bytes'] / MIB:,.0f}), "
-                   f"driver {memory['driver_bytes'] / MIB:,.0f}, object store {memory['object_store_bytes'] / MIB:,.0f}, "
-                   f"node {memory['node_bytes'] / MIB:,.0f}"),
-        ("storage", f"{f['storage_bytes'] / MIB:,.1f} MiB in the dossier"),
-        ("dossier", f["dossier"]),
-    ]
-    for name, text in lines:
+    again = reads["bytes_further"] + reads["bytes_for_coefficients"]
+    lines = {
+        "campaign": f"{f['campaign']}: {shards['to_take_in']:,} shards, {f['samples']:,} samples, "
+        f"{f['channels']:,} channels; footers read: {shards['footers_read']}",
+        "span": " to ".join(f["span"]) if f["span"] else "no times",
+        "left": f"{shards['left_for_later']} too young, {len(shards['refused'])} refused, "
+        f"{shards['not_listed_any_more']} kept though no longer listed",
+        "summary": f["summary"],
+        "leaf": f"{f['leaf']}; {f['cells']['all']:,} cells, {f['cells']['stored']:,} of them stored",
+        "reads": f"{reads['passes']} pass(es): {_mib(reads['bytes_first'])} now, {_mib(again)} again",
+        "work": f"{work['flops']:.3g} flops, about {work['seconds_about']:,} s with {work['workers']} worker(s) "
+        f"({work['assumed_read_rate']} assumed; start-up apart)",
+        "memory": f"{_mib(memory['worker_bytes'])} per worker (limit {_mib(memory['worker_limit_bytes'])}), "
+        f"driver {_mib(memory['driver_bytes'])}, object store {_mib(memory['object_store_bytes'])}, "
+        f"node {_mib(memory['node_bytes'])}",
+        "storage": f"{_mib(f['storage_bytes'])} in the dossier",
+        "dossier": f["dossier"],
+    }
+    for name, text in lines.items():
         click.echo(f"{name:>9}  {text}")
     for key, why in list(shards["refused"].items())[:10]:
         click.echo(f"  refused  {key}: {why}")
+
+
+def _mib(count: float) -> str:
+    return f"{count / MIB:,.0f} MiB" if count >= 10 * MIB else f"{count / MIB:,.2f} MiB"

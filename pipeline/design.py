@@ -179,8 +179,8 @@ def compare(stored: Design, job: Job, channels_request: str, bytes_to_read: int)
         raise DesignDiffers(
             "the job's design is not the one this dossier was created with",
             where=", ".join(differing),
-            rule="a dossier keeps its design for life: " + "; ".join(f"{key} is {a}" for key, (a, _) in differing.items()),
-            got="; ".join(f"{key}: {b}" for key, (_, b) in differing.items()),
+            rule="a dossier keeps its design; stored: " + "; ".join(f"{key}: {a}" for key, (a, _) in differing.items()),
+            got="asked: " + "; ".join(f"{key}: {b}" for key, (_, b) in differing.items()),
             remedy=f"go back to the stored values, or name a new dossier.location, which reads "
             f"{bytes_to_read:,} bytes of the campaign again",
         )
@@ -229,7 +229,7 @@ def _leaf(job: Job, shards: Sequence[Shard], channels: int, width: int) -> tuple
 
 
 def _round_leaf(shards: Sequence[Shard], rows: int, wanted: int) -> int:
-    """Return a round span that holds enough samples and no row group crosses twice, shard-long if that is not too long."""
+    """Return a round span with enough samples that no row group crosses twice; shard-long if that is not too long."""
     spans = [s.last - s.first for s in shards if s.first is not None and s.last is not None]
     groups = [g.last - g.first for s in shards for g in s.groups if g.first is not None and g.last is not None]
     seconds_per_row = sum(spans) / max(1, rows - len(spans))

@@ -16,8 +16,6 @@ from shardfold.tasks import Outcome, Task, Workplace, perform
 class Executor(Protocol):
     """Performs tasks."""
 
-    workers: int
-
     def perform(self, workplace: Workplace, tasks: Sequence[Task]) -> Iterator[tuple[Task, Outcome]]:
         """Yield each task with its outcome as it is done; refused shards are outcomes, other errors are raised."""
         ...
@@ -33,8 +31,6 @@ class Executor(Protocol):
 
 class SerialExecutor:
     """Performs tasks one after the other in this process."""
-
-    workers = 1
 
     def perform(self, workplace: Workplace, tasks: Sequence[Task]) -> Iterator[tuple[Task, Outcome]]:
         """Yield each task with its outcome, in order."""

@@ -48,7 +48,8 @@ class RayExecutor:
         if self._owns:
             _start(workers, address)
         cpus = int(ray.cluster_resources().get("CPU", 1))
-        self.workers = min(workers, cpus) if workers else cpus
+        # One more than there are CPUs keeps every worker busy; a number that was asked for is kept to.
+        self._most_flying = min(workers, cpus) if workers else cpus + 1
         variables = {} if blas == "any" else {"env_vars": {CORE_VARIABLE: blas}}
         self._remote = ray.remote(
             num_cpus=1, max_retries=LOST_WORKER_RETRIES, retry_exceptions=False, runtime_env=variables or None
@@ -67,7 +68,7 @@ class RayExecutor:
         flying: dict[Any, Task] = {}
         try:
             while True:
-                while len(flying) < self.workers + 1 and (task := next(waiting, None)) is not None:
+                while len(flying) < self._most_flying and (task := next(waiting, None)) is not None:
                     flying[self._remote.remote(shared, task)] = task
                 if not flying:
                     return

@@ -19,7 +19,7 @@ from shardfold.kernels.spectra import dominant_frequency
 from shardfold.kernels.whole import Shape, Summary
 from shardfold.plan import Cell
 from shardfold.publish import Finding
-from shardfold.tasks import CoefficientMap, PartWritten, WriteCoefficients, Workplace
+from shardfold.tasks import CoefficientMap, PartWritten, Workplace, WriteCoefficients
 
 LONGEST_SEGMENT = 8192
 SHORTEST_SEGMENT = 64

@@ -157,7 +157,7 @@ class CellGather:
             # Blocks take the memory order of the layout: whole channels or whole samples side by side.
             order: Any = "C" if _channel_major(values) else "F"
             self._buffer = np.empty((self._shape.m, self._design.block_samples), self._dtype, order=order)
-        count = min(len(times), self._buffer.shape[1] - self._filled)
+        count: int = min(len(times), self._buffer.shape[1] - self._filled)
         place = slice(self._filled, self._filled + count)
         self._buffer[:, place] = values[:, :count]
         self._times[place] = times[:count]
@@ -201,9 +201,10 @@ class CellGather:
                 0, "values overflow when gain, scale and weight are applied", "finite prepared values", "overflow"
             )
         channel, sample, value = found
+        what = f"channel {self._channels[channel]} is {value} at {self._moment(sample)}"
         return self._refuse(
             sample,
-            f"channel {self._channels[channel]} is {value} at {self._moment(sample)}",
+            what,
             "design.gaps: refuse (every value must be finite)",
             str(value),
         )
@@ -240,7 +241,8 @@ class _Keeper:
         self._least = int(draw[0])
         samples = np.unique(draw[2:] % np.uint64(n)).astype(np.int64)
         start = int(draw[1]) % max(1, n - KEPT_WINDOW + 1)
-        channels = np.unique(name_keys([f"{draw[1]}/{i}" for i in range(KEPT_CHANNELS)]) % np.uint64(m)).astype(np.int64)
+        drawn = name_keys([f"{draw[1]}/{i}" for i in range(KEPT_CHANNELS)])
+        channels = np.unique(drawn % np.uint64(m)).astype(np.int64)
         self.kept = {
             "kept_samples": np.ascontiguousarray(raw[:, samples].T),
             "kept_sample_rows": samples + first_sample,

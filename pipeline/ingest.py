@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -85,7 +86,7 @@ class Intake:
         before = self.ledger.entry(entry.key, entry.version)
         standing = before is not None and before.state == "refused" and before.why == entry.why
         self.refused[entry.key] = entry
-        self.listen(Refused(entry.key, entry.why["what"] if "what" in entry.why else "", standing))
+        self.listen(Refused(entry.key, entry.why.get("what", ""), standing))
 
     def rows_of(self, read: int) -> dict[int, int]:
         """Return the samples of each leaf that is in, by the ledger."""
@@ -336,7 +337,7 @@ def _overlap(cells: Sequence[tuple[dict[str, Any], ...]]) -> bool:
         if firsts:
             spans.append((min(firsts), max(lasts)))
     spans.sort()
-    return any(later[0] <= earlier[1] for earlier, later in zip(spans, spans[1:], strict=False))
+    return any(later[0] <= earlier[1] for earlier, later in pairwise(spans))
 
 
 def _nothing_left(intake: Intake) -> InputError:

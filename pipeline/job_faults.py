@@ -88,10 +88,10 @@ def holds_secret(text: str) -> bool:
     return _SECRET_VALUE.search(text) is not None
 
 
-def nearest(word: str, known: Iterable[str]) -> str:
-    """Return the known word that is most like this one, nothing if none is near."""
+def nearest(word: str, known: Iterable[str], likeness: float = 0.6) -> str:
+    """Return the known word that is most like this one (1 is the same), nothing if none is near."""
     by_lower = {name.lower(): name for name in known}
-    found = get_close_matches(word.lower(), by_lower, n=1, cutoff=0.6)
+    found = get_close_matches(word.lower(), by_lower, n=1, cutoff=likeness)
     return by_lower[found[0]] if found else ""
 
 

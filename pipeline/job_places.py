@@ -13,6 +13,8 @@ from shardfold.quantities import RuleBroken
 
 _SCHEME = re.compile(r"([A-Za-z][A-Za-z0-9+.-]*)://")
 _SLIP = re.compile(r"(s3a?|gs|https?|file|memory|az|abfs)(:/?)(?=[^/]|$)", re.IGNORECASE)
+_PART = re.compile(r"\*\*/|\*\*|\[[^\]]{2,}\]|\[[^\]!^]\]|.", re.DOTALL)
+_PARTS = {"**/": "(?:.*/)?", "**": ".*", "*": "[^/]*", "?": "[^/]"}
 _S3_LIKE = {"s3a", "s3n"}
 
 
@@ -27,7 +29,7 @@ def is_local(location: str) -> bool:
 
 
 def resolve(written: str, folder: Path) -> str:
-    """Return a location in its one form: URLs without a closing slash, local paths absolute.
+    """Return a location in its one form: S3 URLs without a closing slash, local paths absolute.
 
     Parameters
     ----------
@@ -39,18 +41,18 @@ def resolve(written: str, folder: Path) -> str:
     Raises
     ------
     RuleBroken
-        If it is empty, a misspelt URL, or holds something that is not expanded here.
+        If it is empty, a misspelt URL, a pattern, or holds something that is not expanded here.
     """
     text = written.strip()
-    if not text:
+    if not text or not text.isprintable():
         raise RuleBroken("must name a location", "write s3://bucket/folder/ or a local path")
     if "${" in text or "{{" in text:
-        raise RuleBroken("must be written out: nothing is expanded inside a job", "use --set KEY=VALUE for what changes")
+        raise RuleBroken("must be written out: nothing is expanded in a job", "use --set KEY=VALUE for what changes")
+    if "*" in text:
+        raise RuleBroken("must be a folder, not a pattern", "patterns belong into source.match")
     if slip := _SLIP.match(text):
         raise RuleBroken("must have two slashes after the colon of a URL", f'write "{slip[1].lower()}://..."')
-    if not is_url(text):
-        return str((folder / Path(text).expanduser()).resolve())
-    return _resolved_url(text)
+    return _resolved_url(text) if is_url(text) else _resolved_path(text, folder)
 
 
 def inside(inner: str, outer: str) -> str | None:
@@ -60,21 +62,27 @@ def inside(inner: str, outer: str) -> str | None:
 
 
 def pattern_regex(pattern: str) -> re.Pattern[str]:
-    """Return the regular expression of a pattern over keys.
+    """Return the regular expression of a pattern over keys, to be matched in full.
 
-    ``**/`` is any number of folders, also none; ``*`` and ``?`` stay within one name; ``[abc]``, ``[!abc]`` as usual.
+    ``**/`` is any depth of folders, none included; ``*``, ``?``, ``[abc]`` and ``[!abc]`` stay within a folder.
     """
-    return re.compile("".join(_regex_part(part) for part in re.findall(r"\*\*/|\*\*|\[!?\]?[^\]]*\]|.", pattern, re.DOTALL)))
+    return re.compile("".join(_regex_part(part) for part in _PART.findall(pattern)), re.DOTALL)
 
 
 def _regex_part(part: str) -> str:
-    known = {"**/": "(?:[^/]+/)*", "**": ".*", "*": "[^/]*", "?": "[^/]"}
-    if part in known:
-        return known[part]
-    if len(part) > 2 and part[0] == "[":
-        body = part[1:-1].replace("\\", "\\\\").replace("[", "\\[")
-        return f"[^/{body[1:]}]" if body[0] == "!" else f"[{body}]"
-    return re.escape(part)
+    if part in _PARTS:
+        return _PARTS[part]
+    if len(part) == 1:
+        return re.escape(part)
+    body = part[1:-1].replace("\\", "\\\\").replace("[", "\\[")
+    return f"[^{body[1:]}/]" if body[0] in "!^" else f"[{body}]"
+
+
+def _resolved_path(text: str, folder: Path) -> str:
+    try:
+        return str((folder / Path(text).expanduser()).resolve())
+    except (OSError, RuntimeError, ValueError) as error:
+        raise RuleBroken(f"must be a path that can be followed ({error})") from None
 
 
 def _resolved_url(text: str) -> str:
@@ -102,7 +110,9 @@ def parse_endpoint(value: object) -> str:
     rule = "must be the address of an S3 service: http:// or https://, a host, perhaps a port"
     text = value.strip() if isinstance(value, str) else ""
     if not re.match(r"https?://", text, re.IGNORECASE):
-        example = f'write "http://{text}"' if re.fullmatch(r"[\w.-]+(:\d+)?", text) else 'such as "http://127.0.0.1:9000"'
+        example = (
+            f'write "http://{text}"' if re.fullmatch(r"[\w.-]+(:\d+)?", text) else 'such as "http://127.0.0.1:9000"'
+        )
         raise RuleBroken(rule, example)
     try:
         parts = urlsplit(text)

@@ -11,9 +11,9 @@ from pathlib import Path
 from typing import Any
 
 from shardfold import layout
-from shardfold.job_faults import Fault, one_of
+from shardfold.job_faults import Fault
 from shardfold.job_places import inside, is_local, parse_endpoint, pattern_regex, resolve
-from shardfold.quantities import RuleBroken, parse_duration
+from shardfold.quantities import parse_duration
 from shardfold.yaml_lines import Entry
 
 MATCH_OF_LAYOUT = {"wide": "**/*.parquet", "vector": "**/*.parquet", "array": "**/*.npy"}
@@ -77,18 +77,14 @@ def broken_relations(root: Entry, faulty: frozenset[str], folder: Path) -> list[
 
 
 def _time_of_layout(written: Written) -> Iterator[Fault]:
-    kind, time = written.value("source.layout"), written.value("source.time")
-    if kind not in MATCH_OF_LAYOUT:
-        return
-    if not written.given("source.time"):
-        example = "time: {from_name: REGEX, step: 125 ms}" if kind == "array" else "time: COLUMN"
-        yield written.fault("source.time", f"is needed with layout {kind}", f"write {example}, or time: none")
-    elif kind == "array" and isinstance(time, str) and time != "none":
-        rule = "must not be a column with layout array, which has none"
-        yield written.fault("source.time", rule, "write {from_name: REGEX, step: 125 ms}, {start: TIME, step: 125 ms} or none")
-    elif kind != "array" and isinstance(time, dict):
-        rule = f"must be a column or none with layout {kind}; from_name and start are for layout array"
-        yield written.fault("source.time", rule, "write time: COLUMN, or time: none")
+    layout_name, time = written.value("source.layout"), written.value("source.time")
+    if not written.given("source.time") and written.entry("source") is not None:
+        example = "time: {from_name: REGEX, step: 125 ms}" if layout_name == "array" else "time: COLUMN"
+        yield written.fault("source.time", "is needed and missing", f"write {example}, or time: none if there are none")
+    elif layout_name == "array" and isinstance(time, str) and time != "none":
+        rule = "must not be a column with layout array, which has no columns"
+        remedy = "write {from_name: REGEX, step: 125 ms}, {start: TIME, step: 125 ms} or none"
+        yield written.fault("source.time", rule, remedy)
 
 
 def _values_of_layout(written: Written) -> Iterator[Fault]:
@@ -98,9 +94,8 @@ def _values_of_layout(written: Written) -> Iterator[Fault]:
     elif kind in ("wide", "array") and written.given("source.values"):
         reason = "every column of numbers is a channel" if kind == "wide" else "the array is the values"
         yield written.fault("source.values", f"has no meaning with layout {kind}: {reason}", "leave it out")
-    elif kind == "vector" and written.value("source.values") is not None:
-        if written.value("source.values") == written.value("source.time"):
-            yield written.fault("source.values", "must be another column than source.time")
+    elif kind == "vector" and written.value("source.values") == written.value("source.time") is not None:
+        yield written.fault("source.values", "must be another column than source.time")
 
 
 def _orient_of_layout(written: Written) -> Iterator[Fault]:

@@ -1,4 +1,4 @@
-"""The rules of single values: each function takes what was written and returns the setting, or says which rule it breaks.
+"""The rules of single values: each takes what was written and returns the setting, or says which rule is broken.
 
 No models and no keys of other places; quantities and locations have modules of their own.
 """
@@ -6,65 +6,83 @@ No models and no keys of other places; quantities and locations have modules of 
 from __future__ import annotations
 
 import re
+from collections.abc import Callable
 from typing import Any
 
+from shardfold.job_faults import one_of
 from shardfold.quantities import RuleBroken, parse_bytes, parse_duration
 
 LEAST_MEMORY_BYTES = 256 * 2**20
 WIDEST_PROBE = 65_536
+MOST_WORKERS = 100_000
+MOST_READS = 5
+LARGEST = 2**63 - 1
+TIME_GROUPS = ("time", "seconds", "milliseconds", "microseconds", "nanoseconds")
 
-_TIME_RULE = "must be the name of the time column, {from_name: REGEX, step: DURATION}, {start: TIME, step: DURATION} or none"
+_TIME_RULE = (
+    "must be the name of the time column, {from_name: REGEX, step: DURATION}, {start: TIME, step: DURATION} or none"
+)
 
 
-def a_word(text: str) -> str:
+def one_line(text: str) -> str:
     """Return a name: not empty, one line."""
-    if not text.strip() or re.search(r"[\x00-\x1f\x7f]", text):
+    if not text.strip() or not text.isprintable():
         raise RuleBroken("must be a name on one line, not empty")
     return text
 
 
-def a_pattern(text: str) -> str:
-    """Return a pattern over keys or channel names."""
-    a_word(text)
-    if "://" in text or text.startswith("/"):
-        raise RuleBroken("must be a pattern below the location, without location or leading slash", 'such as "**/*.parquet"')
+def keys_pattern(text: str) -> str:
+    """Return a pattern over the keys below a location."""
+    one_line(text)
+    if "://" in text or text.startswith(("/", "./", "../")):
+        remedy = 'write what comes after the location, such as "**/*.parquet"'
+        raise RuleBroken("must be a pattern of what lies below the location, without the location itself", remedy)
+    if re.search(r"\{[^}]*,[^}]*\}", text):
+        raise RuleBroken("must be a pattern of *, **, ? and [abc]; {a,b} is not one of them", "use * or [abc]")
     return text
 
 
-def a_regex(text: str) -> str:
-    """Return a regular expression with one group, or with a group named ``time``."""
+def some_patterns(patterns: tuple[str, ...] | None) -> tuple[str, ...] | None:
+    """Return patterns of channels to take: at least one, or ``None`` for all."""
+    if patterns is not None and not patterns:
+        raise RuleBroken("must hold at least one pattern", "leave it out to take all channels")
+    return patterns
+
+
+def time_regex(text: str) -> str:
+    """Return a regular expression with one group, or with a group named after what it holds."""
     try:
         compiled = re.compile(text)
     except re.error as error:
-        raise RuleBroken(f"must be a regular expression: {error}") from None
-    if compiled.groups != 1 and "time" not in compiled.groupindex:
-        rule = "must have one group around the time, or a group named time"
-        raise RuleBroken(rule, "such as 'blade-(\\d{8}T\\d{6})\\.npy'; write (?:...) for groups that are no time")
+        raise RuleBroken(f"must be a regular expression ({error})") from None
+    if compiled.groups != 1 and not compiled.groupindex.keys() & set(TIME_GROUPS):
+        rule = f"must have one group, around the time, or a group named {one_of(TIME_GROUPS)}"
+        remedy = r"such as 'blade-(\d{8}T\d{6})\.npy' or '_(?P<seconds>\d+)\.npy'; write (?:...) for other groups"
+        raise RuleBroken(rule, remedy)
     return text
 
 
-def a_table(text: str) -> str:
-    """Return the location of a channel table."""
+def table_name(text: str) -> str:
+    """Return the location of a channel table as it was written."""
     if not re.search(r"\.(csv|parquet)$", text.strip(), re.IGNORECASE):
         raise RuleBroken("must be a table in .csv or .parquet")
     return text
 
 
-def a_time(value: Any) -> Any:
+def time_keys(value: Any) -> Any:
     """Return the keys of where times come from; ``None`` for no times at all."""
     if value == "none":
         return None
     if isinstance(value, str) and value.strip():
         return {"column": value}
     if not isinstance(value, dict) or ("from_name" in value) + ("start" in value) != 1:
-        remedy = "write time: none if the shards hold no times" if value is None else ""
-        raise RuleBroken(_TIME_RULE, remedy)
+        raise RuleBroken(_TIME_RULE, "write time: none if the shards hold no times" if value in (None, False) else "")
     return value
 
 
 def time_kind(value: Any) -> str:
-    """Return which of the three kinds a value of `a_time` is."""
-    return next((f"<{name}>" for name in ("from_name", "start") if name in value), "<column>")
+    """Return which of the three kinds a value of `time_keys` is."""
+    return next((f"<{key}>" for key in ("from_name", "start") if key in value), "<column>")
 
 
 def positive_duration(value: object) -> int:
@@ -77,44 +95,63 @@ def positive_duration(value: object) -> int:
 
 def auto_or_duration(value: object) -> Any:
     """Return ``"auto"`` or a duration in nanoseconds."""
-    return value if value == "auto" else positive_duration(value)
+    if value == "auto":
+        return value
+    try:
+        return positive_duration(value)
+    except RuleBroken as broken:
+        raise RuleBroken(broken.rule.replace("must be", "must be auto, or", 1), broken.remedy) from None
 
 
-def auto_or_width(value: object) -> Any:
-    """Return ``"auto"`` or a number of probe rows."""
-    return _word_or_count(value, ("auto",), WIDEST_PROBE)
+def whole_number(least: int, most: int, words: tuple[str, ...] = ()) -> Callable[[object], Any]:
+    """Return the rule of a whole number between two limits, or one of a few words."""
+    limits = f"{least} or more" if most == LARGEST else f"from {least} to {most}"
+    wanted = f"must be {one_of([*words, f'a whole number, {limits}'])}"
 
+    def check(value: object) -> Any:
+        if value in words or (isinstance(value, int) and not isinstance(value, bool) and least <= value <= most):
+            return value
+        raise RuleBroken(wanted, _plain_digits(value, least, most))
 
-def workers(value: object) -> Any:
-    """Return ``"auto"``, ``"serial"`` or a number of workers."""
-    return _word_or_count(value, ("auto", "serial"), 1_000_000)
+    return check
 
 
 def ray_address(text: str) -> str:
     """Return the address of a running Ray."""
     if text.startswith("ray://"):
         rule = "must be HOST:PORT or auto; Ray Client (ray://) is not used"
-        raise RuleBroken(rule, "start the run as a job on the cluster, with address: auto")
-    return a_word(text)
+        raise RuleBroken(rule, "start the run on the cluster as a Ray job, with address: auto")
+    if not re.fullmatch(r"auto|local|[\w.-]+:\d{1,5}|\[[0-9a-fA-F:]+\]:\d{1,5}", text):
+        raise RuleBroken("must be HOST:PORT or auto", "leave it out to use RAY_ADDRESS, or a Ray of its own")
+    return text
 
 
-def memory_size(value: object) -> int:
+def worker_memory(value: object) -> int:
     """Return the private memory of a worker in bytes."""
     size = parse_bytes(value)
     if size < LEAST_MEMORY_BYTES:
-        raise RuleBroken("must be at least 256 MiB, of which the interpreter and its libraries take most")
+        raise RuleBroken("must be at least 256 MiB: interpreter and libraries alone take most of that")
     return size
 
 
-def known_terms(terms: tuple[str, ...]) -> tuple[str, ...]:
+def different_terms(terms: tuple[str, ...]) -> tuple[str, ...]:
     """Return background terms, each once."""
     if len(set(terms)) != len(terms):
         raise RuleBroken("must name each term once")
     return terms
 
 
-def _word_or_count(value: object, words: tuple[str, ...], most: int) -> Any:
-    whole = isinstance(value, int) and not isinstance(value, bool) and 1 <= value <= most
-    if value in words or whole:
-        return value
-    raise RuleBroken(f"must be {', '.join(words)} or a whole number from 1 to {most}")
+def _plain_digits(value: object, least: int, most: int) -> str:
+    """Return a remedy for a number that was not written in plain digits."""
+    text = str(value).strip()
+    if not isinstance(value, str | float) or not re.fullmatch(r"\d+(\.0*)?", text):
+        return ""
+    number = int(text.partition(".")[0])
+    return f"write {number}" if least <= number <= most else ""
+
+
+RANK = whole_number(1, LARGEST)
+READS = whole_number(1, MOST_READS)
+SEED = whole_number(0, LARGEST)
+WIDTH = whole_number(1, WIDEST_PROBE, ("auto",))
+WORKERS = whole_number(1, MOST_WORKERS, ("auto", "serial"))

@@ -1,4 +1,4 @@
-"""The ledger: numbered commits, each a small change, that say which shard versions are in and which cells hold them.
+"""The ledger: numbered commits, each a small change, of which shards are in and which cells hold them.
 
 A commit is one conditional create, so two writers cannot both have a number. It ends in one of three ways: landed,
 refused (another writer took the number), or unknown (the answer was lost; the token in the body, read back, settles it).

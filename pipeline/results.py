@@ -17,8 +17,8 @@ import pyarrow as pa
 import pyarrow.compute as pc
 
 from shardfold import layout
-from shardfold.artifacts import digest_bytes
 from shardfold.errors import InputError, RecordCorrupt
+from shardfold.ids import digest_bytes
 from shardfold.publish import CAUTION
 from shardfold.store import Store, StoreSettings, connect
 from shardfold.tables import mode_names, read_table
@@ -125,7 +125,7 @@ class Result:
         if "mean" in self.background.column_names:
             values += self.background.column("mean").to_numpy()[rows, np.newaxis]
         keys = {name: series.column(name) for name in series.column_names if not name.startswith("c_")}
-        return pa.table(keys | {name: row for name, row in zip(chosen, values, strict=True)})
+        return pa.table(keys | dict(zip(chosen, values, strict=True)))
 
     def __repr__(self) -> str:
         head = f"Result {self.location}: {self.manifest['campaign']}"

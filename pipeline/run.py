@@ -106,11 +106,6 @@ class Deferred:
         self._make = make
         self._made: Executor | None = None
 
-    @property
-    def workers(self) -> int:
-        """Return the number of workers of the executor."""
-        return self._executor().workers
-
     def perform(self, workplace: Workplace, tasks: Sequence[Task]) -> Iterator[tuple[Task, Outcome]]:
         """Start the executor if there is a task, and let it perform them."""
         return self._executor().perform(workplace, tasks) if tasks else iter(())

@@ -35,6 +35,7 @@ __all__ = [
 ATTEMPTS = 4
 
 _SCHEME = re.compile(r"^([a-z][a-z0-9+.-]+)://", re.IGNORECASE)
+_ENDPOINT = re.compile(r"^https?://[^/@\s?#]+/?$", re.IGNORECASE)
 
 
 def open_store(
@@ -102,6 +103,9 @@ def _adapter(settings: StoreSettings) -> Adapter:
                 rule="secrets come from the usual environment and profiles alone",
                 remedy="take out everything before the @",
             )
+    if settings.endpoint is not None and not _ENDPOINT.match(settings.endpoint):
+        rule, remedy = "http://HOST:PORT or https://HOST", "correct storage.endpoint"
+        raise InputError("the endpoint is no address", where=settings.location, rule=rule, remedy=remedy)
     if scheme in ("", "file"):
         return LocalAdapter(_path(settings.location))
     # The adapters below cost half a second to import, which a local run does without.

@@ -34,6 +34,10 @@ class Transient(StorageFailed):
     """A request failed in a way that a second try may mend. Never leaves `store_retries.Retrying`."""
 
 
+class Busy(Transient):
+    """The service did answer, and said that it cannot just now: worth a longer wait."""
+
+
 @dataclass(frozen=True)
 class StoreSettings:
     """Where a store is and how it is reached: inert, comparable, hashable, picklable, and without secrets.
@@ -83,7 +87,7 @@ class Adapter(Protocol):
         """See `Store.read`."""
 
     def create(self, key: str, data: Bytes, token: str) -> Created:
-        """See `Store.create`; tries of one create carry the same token, by which it knows its own work again."""
+        """See `Store.create`. All tries of one call carry one token, by which its own work can be known again."""
 
     def put(self, key: str, data: Bytes) -> None:
         """See `Store.put`."""
@@ -92,7 +96,7 @@ class Adapter(Protocol):
         """See `Store.delete`."""
 
     def prepare(self) -> None:
-        """Make the root where the storage needs one made. Idempotent."""
+        """Make a missing root where that is the store's business, else check that it is there. Idempotent."""
 
 
 class Store(Protocol):
@@ -134,13 +138,8 @@ class Store(Protocol):
             If the object is shorter than the range.
         """
 
-    def create(self, key: str, data: Bytes, token: str = "") -> Created:
+    def create(self, key: str, data: Bytes) -> Created:
         """Make an object unless its key is taken. Atomic: all of it or nothing, and only one caller lands.
-
-        Parameters
-        ----------
-        token : str, optional
-            Names this call; a second call with the same token and key counts as the same call. Made up if empty.
 
         Returns
         -------
@@ -166,19 +165,18 @@ class Store(Protocol):
 
 
 def cuts(start: int, stop: int) -> list[tuple[int, int]]:
-    """Return the byte ranges that a read of ``start <= i < stop`` is cut into, one request each."""
+    """Return the byte ranges of ``CUT_BYTES`` at most that a read is cut into, one request each."""
     return [(at, min(at + CUT_BYTES, stop)) for at in range(start, stop, CUT_BYTES)]
 
 
 def check_range(place: str, size: int, start: int, stop: int | None) -> int:
     """Return the end of a range within an object of ``size`` bytes, or raise where it does not fit."""
     end = size if stop is None else stop
-    if not 0 <= start <= end:
-        raise ValueError(f"range: 0 <= start <= stop, got start={start}, stop={end}")
-    if end > size:
-        raise RecordCorrupt(
-            "an object ends before the bytes asked for", where=place, rule=f"at least {end} bytes", got=f"{size} bytes"
-        )
+    if start < 0 or (stop is not None and start > stop):
+        raise ValueError(f"range: 0 <= start <= stop, got start={start}, stop={stop}")
+    if max(start, end) > size:
+        rule, got = f"at least {max(start, end)} bytes", f"{size} bytes"
+        raise RecordCorrupt("an object ends before the bytes asked for", where=place, rule=rule, got=got)
     return end
 
 

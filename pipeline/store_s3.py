@@ -59,7 +59,7 @@ class S3Adapter:
         # urlsplit takes "?" for the start of a query; in a key it is a letter.
         path = settings.location.removeprefix(f"{parts.scheme}://{parts.netloc}").strip("/")
         self.bucket, self.prefix = parts.netloc, f"{path}/" if path else ""
-        self._settings = settings
+        self._endpoint = settings.endpoint or ""
         self._bucket_seen = False
         self._files = s3fs.S3FileSystem(
             anon=settings.anonymous,
@@ -72,13 +72,12 @@ class S3Adapter:
 
     @property
     def name(self) -> str:
-        """Return bucket, prefix and, where one was named, the endpoint."""
+        """Return bucket, prefix and, once it is known, the endpoint."""
         return self.place("")
 
     def place(self, key: str) -> str:
         """Return the URL of an object with the endpoint."""
-        endpoint = self._settings.endpoint
-        return f"s3://{self.bucket}/{self.prefix}{key}" + (f" at {endpoint}" if endpoint else "")
+        return f"s3://{self.bucket}/{self.prefix}{key}" + (f" at {self._endpoint}" if self._endpoint else "")
 
     def page(self, prefix: str, bookmark: str | None) -> tuple[list[ObjectInfo], str | None]:
         """Return up to 1000 objects."""
@@ -101,7 +100,6 @@ class S3Adapter:
 
     def read(self, key: str, version: str | None, start: int, stop: int | None) -> memoryview:
         """Return bytes of one version, in parallel requests that each name the version."""
-        check_key(key)
         return self._call(key, lambda client: self._read(client, key, version, start, stop)).toreadonly()
 
     def create(self, key: str, data: Bytes, token: str) -> Created:
@@ -112,14 +110,16 @@ class S3Adapter:
     def put(self, key: str, data: Bytes) -> None:
         """Make or replace an object in one request."""
         check_key(key)
-        self._call(key, lambda client: client.put_object(**self._at(key), Body=_sendable(data)))
+        self._call(key, lambda client: self._put(client, key, data))
 
     def delete(self, key: str) -> None:
         """Remove an object."""
+        check_key(key)
         self._call(key, lambda client: client.delete_object(**self._at(key)))
 
     def prepare(self) -> None:
-        """Do nothing: a bucket is made by its owner, a prefix by its first object."""
+        """Check that the bucket is there: some servers make a bucket of any name at the first write into it."""
+        self._call("", lambda client: client.head_bucket(Bucket=self.bucket))
 
     def _at(self, key: str) -> dict[str, str]:
         return {"Bucket": self.bucket, "Key": self.prefix + key}
@@ -133,6 +133,7 @@ class S3Adapter:
     async def _exchange(self, key: str, ask: Callable[[Any], Coroutine[Any, Any, T]]) -> T:
         try:
             client = await self._client()
+            self._endpoint = _without_user(client.meta.endpoint_url)
             return await ask(client)
         except ShardfoldError:
             raise
@@ -161,9 +162,15 @@ class S3Adapter:
         info = _info(key, answer["ETag"], answer["ContentLength"], answer["LastModified"])
         return info, answer.get("Metadata", {}).get(_TOKEN, "")
 
+    async def _put(self, client: Any, key: str, data: Bytes, **conditions: Any) -> None:
+        if not self._bucket_seen:
+            await client.head_bucket(Bucket=self.bucket)
+        body = bytes(data) if isinstance(data, memoryview) else data
+        await client.put_object(**self._at(key), Body=body, **conditions)
+
     async def _create(self, client: Any, key: str, data: Bytes, token: str) -> Created:
         try:
-            await client.put_object(**self._at(key), Body=_sendable(data), IfNoneMatch="*", Metadata={_TOKEN: token})
+            await self._put(client, key, data, IfNoneMatch="*", Metadata={_TOKEN: token})
         except ClientError as error:
             if http_status(error) != 412:
                 raise
@@ -186,19 +193,18 @@ class S3Adapter:
 
     async def _read_any(self, client: Any, key: str, start: int, stop: int | None) -> memoryview:
         """Read an object of unknown version: the first answer names it, and the others must be of the same."""
-        ahead = start + CUT_BYTES if stop is None else min(start + CUT_BYTES, stop)
-        answer = None if start == ahead else await self._ask_range(client, key, None, start, ahead)
-        if answer is None:
-            # Nothing at or beyond "start": an object may be empty, and an empty range cannot be asked for.
-            size = (await self._described(client, key)).size
-            check_range(self.place(key), size, start, stop)
+        first = next(iter(cuts(start, start + CUT_BYTES if stop is None else stop)), None)
+        answer = None if first is None else await self._ask_range(client, key, None, *first)
+        if first is None or answer is None:
+            # An empty range cannot be asked for, and an empty object has no other.
+            check_range(self.place(key), (await self._described(client, key)).size, start, stop)
             return memoryview(b"")
         version = _version(answer["ETag"], _total(answer))
         end = check_range(self.place(key), _total(answer), start, stop)
         buffer = memoryview(bytearray(end - start))
-        first = min(ahead, end) - start
-        await self._receive(answer, key, version, start, buffer[:first])
-        await self._fill(client, key, version, start + first, buffer[first:])
+        length = min(first[1], end) - start
+        await self._receive(answer, key, version, start, buffer[:length])
+        await self._fill(client, key, version, start + length, buffer[length:])
         return buffer
 
     async def _read_nothing(self, client: Any, key: str, version: str) -> None:
@@ -260,6 +266,11 @@ class S3Adapter:
                 raise Transient("an answer ended early", where=self.place(key), rule=f"{len(buffer)} bytes", got=got)
 
 
+def _without_user(url: str) -> str:
+    parts = urlsplit(url)
+    return parts._replace(netloc=parts.netloc.rpartition("@")[2]).geturl()
+
+
 def _info(key: str, etag: str, size: int, modified: datetime) -> ObjectInfo:
     return ObjectInfo(key, _version(etag, size), size, modified.timestamp())
 
@@ -281,6 +292,3 @@ def _total(answer: Any) -> int:
     total = answer.get("ContentRange", "").rpartition("/")[2]
     return int(total) if total.isdecimal() else 0
 
-
-def _sendable(data: Bytes) -> bytes | bytearray:
-    return bytes(data) if isinstance(data, memoryview) else data

@@ -13,7 +13,7 @@ from botocore import exceptions as boto
 from botocore.httpchecksum import FlexibleChecksumError
 from botocore.parsers import ResponseParserError
 from shardfold.errors import AccessDenied, InputError, NothingToRead, ShardfoldError, StorageFailed
-from shardfold.store_promises import Transient
+from shardfold.store_promises import Busy, Transient
 
 _NO_CREDENTIALS = (
     boto.NoCredentialsError,
@@ -51,7 +51,7 @@ def http_status(error: boto.ClientError) -> int:
 def error_code(error: boto.ClientError) -> str:
     """Return the service's word for an error, such as ``NoSuchKey``; only its status where the answer has no body."""
     code = str(error.response.get("Error", {}).get("Code", ""))
-    return code if code.isalnum() else ""
+    return code if code.isalpha() else ""
 
 
 def is_missing_object(error: boto.ClientError) -> bool:
@@ -93,7 +93,7 @@ def _answered(error: boto.ClientError, place: str) -> ShardfoldError:
     if status in (401, 403) or code in _DENIED_CODES:
         return AccessDenied("the service denies access", where=place, got=got, remedy=_CHAIN)
     if status in _BUSY_STATUS or code in _BUSY_CODES:
-        return Transient("the service is busy or broken", where=place, got=got, remedy="wait, then repeat")
+        return Busy("the service is busy or broken", where=place, got=got, remedy="wait, then repeat")
     if is_missing_object(error):
         return NothingToRead("there is no such object", where=place, got=got)
     if status == 404:

@@ -22,6 +22,7 @@ from shardfold.channels import ChannelTable, read_table
 from shardfold.design import Design
 from shardfold.errors import ShardRefused, VersionChanged
 from shardfold.gather import CellGather
+from shardfold.ids import digest_bytes
 from shardfold.job import Source
 from shardfold.kernels.addressed import STREAM_CHECK, name_keys, normals
 from shardfold.kernels.blocks import Preparation
@@ -243,7 +244,7 @@ def write_coefficients(workplace: Workplace, task: WriteCoefficients) -> PartWri
     return PartWritten(
         task.key,
         len(times),
-        artifacts.digest_bytes(data),
+        digest_bytes(data),
         (int(steps.min()), int(steps.max())),
         power,
         segments,
@@ -264,8 +265,9 @@ def _coefficients_of_x(workplace: Workplace, desk: _Desk, cell: Cell, task: Writ
         offset = task.mapping.rows @ (centre - task.mapping.centre)
         values[:, block] = task.mapping.rows @ x[block].T.astype(np.float64) + offset[:, None]
         start += int(count)
-    owners = np.repeat([p["shard"] for p in header.facts["pieces"]], [p["rows"] for p in header.facts["pieces"]])
-    return times, owners, values
+    pieces = header.facts["pieces"]
+    names = np.array([piece["shard"] if not workplace.design.timed else "" for piece in pieces])
+    return times, np.repeat(names, [piece["rows"] for piece in pieces]), values
 
 
 def _coefficients_by_reading(
@@ -290,8 +292,9 @@ class _Projector:
     def take(self, batch: Any, leaf: int, inside: bool) -> None:
         times = batch.times if batch.times is not None else batch.first_row + np.arange(batch.values.shape[1])
         mask = np.ones(len(times), bool) if inside else times // self._design.leaf_ns == leaf
-        prepared = self._preparation.apply(batch.values[:, mask]) - self._mapping.centre[:, None]
-        self._parts.append((times[mask], np.full(int(mask.sum()), self._owner), self._mapping.rows @ prepared))
+        prepared = self._preparation.prepare(batch.values[:, mask]) - self._mapping.centre[:, None]
+        owner = "" if self._design.timed else self._owner
+        self._parts.append((times[mask], np.full(int(mask.sum()), owner), self._mapping.rows @ prepared))
 
     def finish(self) -> tuple[Array, ...]:
         return tuple(np.concatenate(arrays, axis=-1) for arrays in zip(*self._parts, strict=True))

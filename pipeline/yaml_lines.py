@@ -184,7 +184,7 @@ class _Reader:
             return Entry(None, spot, keys=self._keys(node, path))
         if isinstance(node, yaml.SequenceNode):
             return Entry(None, spot, items=[self.entry(item, path, self.spot_of(item)) for item in node.value])
-        made = Entry(None, spot, written=str(node.value), quoted=node.style in ("'", '"'))
+        made = Entry(None, spot, written=str(node.value), quoted=getattr(node, "style", None) in ("'", '"'))
         self._fill(made, node, path)
         return made
 

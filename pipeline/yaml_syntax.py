@@ -84,8 +84,8 @@ _MEANINGS = (
     ("document start", False, "text follows after the end of the document", "remove the line ... above"),
     ("sequence entries are not allowed", False, "a list must start on a line of its own", "write [a, b] on this line"),
     ("scanning a directive", False, "a line that starts with % needs quotes", "put the text in quotes"),
-    ("flow sequence.*expected", True, "the list that opens with [ here is not closed", "close it with ], items apart by ,"),
-    ("flow mapping.*expected", True, "the mapping that opens with { here is not closed", "close it with }, items apart by ,"),
+    ("flow sequence.*expected", True, "the list that opens with [ here is not closed", "close it with ]"),
+    ("flow mapping.*expected", True, "the mapping that opens with { here is not closed", "close it with }"),
     ("a tag|tag handle", False, "a value that starts with ! needs quotes", "put the value in quotes"),
 )
 

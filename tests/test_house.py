@@ -14,6 +14,7 @@ import sys
 from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
 from fnmatch import fnmatchcase
+from importlib.util import resolve_name
 from pathlib import Path
 
 import pytest
@@ -26,7 +27,7 @@ ROOT = Path(__file__).resolve().parents[1]
 # A module imports from its own layer and from those above it here, never from those below. Patterns; the first counts.
 LAYERS = (
     "errors ids events",
-    "job job_* yaml_* quantities layout store store_* blas",
+    "job job_* yaml_* quantities layout store store_* local_s3 blas",
     "readers readers.* inventory channels artifacts tables design",
     "dossier plan budget ledger publish",
     "gather tasks executor",
@@ -66,7 +67,7 @@ TOP_LEVEL = {
     "deploy", "configs",
 }  # fmt: skip
 DOCUMENTS = ("README.md", "DEVELOPERS.md")
-MODULE_LINES, FUNCTION_LINES, USUAL_FUNCTION_LINES = 400, 60, 35
+MODULE_LINES, TEST_MODULE_LINES, FUNCTION_LINES, USUAL_FUNCTION_LINES = 400, 500, 60, 35
 
 # Built from halves, so that this file does not hold what it looks for.
 WORKPLACE = re.compile(
@@ -126,31 +127,20 @@ KNOWN = {module.dotted for module in PRODUCT}
 
 def imports_of(module: Module) -> list[Import]:
     """Return all imports of a module; ``from package import module`` counts as an import of the module."""
-    late = {
-        id(node) for function in functions_of(module.tree) for node in ast.walk(function)
-        if isinstance(node, ast.Import | ast.ImportFrom)
-    }  # fmt: skip
+    package = module.dotted if module.path.stem == "__init__" else module.dotted.rpartition(".")[0]
+    late = {id(node) for function in functions_of(module.tree) for node in ast.walk(function)}
     found = []
     for node in ast.walk(module.tree):
         if isinstance(node, ast.Import):
             targets = [alias.name for alias in node.names]
         elif isinstance(node, ast.ImportFrom):
-            source = absolute(module, node)
+            source = resolve_name("." * node.level + (node.module or ""), package)
             inner = [f"{source}.{alias.name}" for alias in node.names]
             targets = [name if name in KNOWN else source for name in inner]
         else:
             continue
         found += [Import(target, node.lineno, id(node) in late) for target in targets]
     return found
-
-
-def absolute(module: Module, node: ast.ImportFrom) -> str:
-    """Return the full name of what ``from ... import`` imports from."""
-    if not node.level:
-        return str(node.module)
-    up = node.level - (module.path.stem == "__init__")
-    package = module.dotted.rsplit(".", up)[0] if up else module.dotted
-    return f"{package}.{node.module}" if node.module else package
 
 
 def functions_of(tree: ast.AST) -> Iterator[ast.FunctionDef | ast.AsyncFunctionDef]:
@@ -160,11 +150,10 @@ def functions_of(tree: ast.AST) -> Iterator[ast.FunctionDef | ast.AsyncFunctionD
 
 def length_of(function: ast.FunctionDef | ast.AsyncFunctionDef) -> int:
     """Return the lines of a function without its docstring."""
-    lines = (function.end_lineno or function.lineno) - function.lineno + 1
-    first = function.body[0]
-    if ast.get_docstring(function) is not None:
-        lines -= (first.end_lineno or first.lineno) - first.lineno + 1
-    return lines
+    whole, first = function, function.body[0]
+    spans = [whole, first] if ast.get_docstring(function) is not None else [whole]
+    lines = [(node.end_lineno or node.lineno) - node.lineno + 1 for node in spans]
+    return lines[0] - sum(lines[1:])
 
 
 def matches(name: str, patterns: Iterable[str]) -> bool:
@@ -287,7 +276,9 @@ def test_names_say_what_is_inside():
 
 def test_modules_and_functions_have_a_bearable_length():
     """Hard limits for each, and nine functions in ten below the usual length."""
-    faults = [f"{m}: {n} lines" for m in PRODUCT + TESTS if (n := m.text.count("\n")) > MODULE_LINES]
+    limits = {"tests": TEST_MODULE_LINES}
+    lines = {module: module.text.count("\n") for module in PRODUCT + TESTS}
+    faults = [f"{module}: {n} lines" for module, n in lines.items() if n > limits.get(module.room, MODULE_LINES)]
     lengths = []
     for module in PRODUCT:
         for function in functions_of(module.tree):
@@ -413,7 +404,7 @@ def test_documented_commands_exist_and_existing_ones_are_documented():
 
 
 def test_documented_job_keys_exist_and_existing_ones_are_documented():
-    """Jobs in configs/ are sound, and YAML in the documents has no unknown key; every key stands in one or the other."""
+    """Jobs in configs/ are sound, YAML in the documents has no unknown key, every key stands in one or the other."""
     known = job.known_keys()
     texts = {f"configs/{path.name}": path.read_text(encoding="utf-8") for path in (ROOT / "configs").glob("*.yaml")}
     assert texts, "configs/ holds no job"
@@ -427,7 +418,8 @@ def test_documented_job_keys_exist_and_existing_ones_are_documented():
     words = {word for document in DOCUMENTS for word in code_words(document)}
     sections = "|".join(key for key in known if any(other.startswith(f"{key}.") for other in known))
     dotted = {word for word in words if re.fullmatch(rf"({sections})(\.[a-z_]+)+", word)}
-    faults += [f"no key {word}" for word in sorted(dotted - set(known)) if not word.endswith((".json", ".py", ".parquet"))]
+    files = {word for word in dotted if word.endswith((".json", ".py", ".parquet"))}
+    faults += [f"no key {word}" for word in sorted(dotted - files - set(known))]
     everything = "\n".join([*texts.values(), *words])
     leaves = {key.split(".")[-1] for key in known} - {part for key in known for part in key.split(".")[:-1]}
     complain(faults + [f"not documented: {k}" for k in sorted(leaves) if not re.search(rf"\b{k}\b", everything)])

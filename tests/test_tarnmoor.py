@@ -9,11 +9,11 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
-import yaml
 from scipy.signal import cont2discrete, welch
 
 from shardfold import tarnmoor
 from shardfold.channels import read_table
+from shardfold.job import parse_job
 
 
 class Shelf(dict[str, bytes]):
@@ -202,11 +202,15 @@ def test_channel_table_names_every_point():
     np.testing.assert_array_equal(table.positions["x_m"], tarnmoor.positions())
 
 
-def test_job_text_is_yaml_with_the_endpoint_on_s3_locations_only():
-    """Awkward names are quoted; a local dossier gets no endpoint."""
-    job = yaml.safe_load(tarnmoor.job_text("s3://c/a: b#1/", "/tmp/it's here", "http://127.0.0.1:9", "deck.parquet"))
-    assert job["source"]["location"] == "s3://c/a: b#1/"
-    assert job["source"]["storage"] == {"endpoint": "http://127.0.0.1:9", "region": "us-east-1"}
-    assert job["dossier"] == {"location": "/tmp/it's here"}
-    assert job["source"]["channels"] == {"table": "deck.parquet"}
-    assert yaml.safe_load(tarnmoor.job_text("s3://c/", "s3://d/", None, "t"))["dossier"] == {"location": "s3://d/"}
+def test_job_is_sound_and_only_s3_locations_get_the_endpoint():
+    """Read by the package itself; awkward names survive; a local dossier needs no endpoint."""
+    text = tarnmoor.job_text("s3://moor/a: b#1/", "/tmp/it's here", "http://127.0.0.1:9", "deck.parquet")
+    settings = parse_job(text, "job.yaml")
+    assert settings.source.location.rstrip("/") == "s3://moor/a: b#1"
+    assert settings.source.storage.endpoint == "http://127.0.0.1:9"
+    assert settings.dossier.location == "/tmp/it's here"
+    assert settings.dossier.storage.endpoint is None
+    assert (settings.source.layout, settings.source.values, settings.source.settle_ns) == ("vector", "deck", 0)
+    assert settings.modes.rank == 3
+    unnamed = parse_job(tarnmoor.job_text("s3://moor/c/", "s3://moor/d/", None, "deck.parquet"), "job.yaml")
+    assert unnamed.source.storage.endpoint is None

@@ -11,6 +11,7 @@ from typing import Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
+
 from shardfold.errors import ShardRefused
 from shardfold.ids import ObjectInfo, RowGroup, Shard
 

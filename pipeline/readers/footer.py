@@ -16,12 +16,15 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
+
 from shardfold.ids import ObjectInfo
 from shardfold.readers.batch import ByteSource, refused
 
 TAIL_BYTES = 64 * 2**10
 # A request costs about as long as a MiB of transfer, so a gap smaller than that is read over.
 GAP_BYTES = 2**20
+# Measured: smaller slices cost time, larger ones memory (pyarrow holds several times a slice while it decodes one).
+SLICE_BYTES = 2**20
 _TRAILER_BYTES = 8
 _REFETCH = "copy the shard again from where it was made"
 
@@ -139,6 +142,32 @@ def open_group(store: ByteSource, footer: Footer, group: int, leaves: Sequence[i
             MemoryParts(parts, info.size), metadata=footer.metadata, pre_buffer=False, page_checksum_verification=True
         )
         return file.reader
+
+
+def slices(reader: Any, footer: Footer, group: int, leaves: Sequence[int], row_bytes: int) -> Iterator[Any]:
+    """Yield a row group's columns as record batches of about `SLICE_BYTES`, all rows that the footer promises.
+
+    Raises
+    ------
+    ShardRefused
+        When the bytes cannot be decoded, or hold fewer rows than promised; a caller that was given all batches
+        without an error has all rows.
+    """
+    place, rows, done = f"row group {group}", footer.rows[group], 0
+    batches = reader.iter_batches(
+        max(1, SLICE_BYTES // row_bytes), row_groups=[group], column_indices=list(leaves), use_threads=False
+    )
+    while True:
+        with refusing(footer.info, "the row group cannot be decoded", place=place):
+            batch = next(batches, None)
+        if batch is None:
+            break
+        done += len(batch)
+        if done > rows:
+            break
+        yield batch
+    if done != rows:
+        raise refused(footer.info, "the row group holds other rows", place=place, rule=f"{rows} rows", got=f"{done}")
 
 
 @contextlib.contextmanager

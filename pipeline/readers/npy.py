@@ -15,6 +15,7 @@ from typing import Any
 import numpy as np
 from numpy.lib import format as npy_format
 from numpy.typing import NDArray
+
 from shardfold.channels import keep_names
 from shardfold.ids import ObjectInfo, RowGroup, Shard
 from shardfold.readers.batch import Batch, ByteSource, refused

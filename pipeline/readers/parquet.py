@@ -10,11 +10,13 @@ from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from typing import Any, Protocol
 
+import numpy as np
 from numpy.typing import NDArray
+
 from shardfold.ids import ObjectInfo, RowGroup, Shard
 from shardfold.readers.batch import Batch, ByteSource, group_peak_bytes, refused, some_names
 from shardfold.readers.columns import Columns
-from shardfold.readers.footer import Footer, open_group, read_footer, refusing, spans_to_read
+from shardfold.readers.footer import Footer, open_group, read_footer, slices, spans_to_read
 from shardfold.readers.times import (
     ColumnRule,
     Grid,
@@ -161,18 +163,20 @@ def _time_field(footer: Footer, rule: TimeRule) -> int | None:
 
 
 def _read_times(reader: Any, footer: Footer, group: int, time_field: int) -> Times:
-    place, name = f"row group {group}", footer.schema.field(time_field).name
-    with refusing(footer.info, f"the time column {name!r} cannot be read", place=place):
-        column = reader.read_row_group(group, column_indices=list(footer.leaves[time_field]), use_threads=False)[0]
-    if len(column) != footer.rows[group]:
-        got = f"{len(column)} of {footer.rows[group]}"
-        raise refused(footer.info, "the row group holds fewer times than promised", place=place, got=got)
-    try:
-        return column_times(column)
-    except TimeFault as fault:
-        place = f"column {name!r}, row {footer.first_rows[group] + fault.row}"
-        remedy = "mend the shard's time column, or leave the shard out with source.match"
-        raise refused(footer.info, fault.what, place=place, rule=fault.rule, got=fault.got, remedy=remedy) from fault
+    """Return the times of one row group, converted a slice at a time so that no second column is held."""
+    times, done = np.empty(footer.rows[group], np.int64), 0
+    for batch in slices(reader, footer, group, footer.leaves[time_field], _TIME_BYTES):
+        try:
+            times[done : done + len(batch)] = column_times(batch.column(0))
+        except TimeFault as fault:
+            name = footer.schema.field(time_field).name
+            place = f"column {name!r}, row {footer.first_rows[group] + done + fault.row}"
+            remedy = "mend the shard's time column, or leave the shard out with source.match"
+            raise refused(
+                footer.info, fault.what, place=place, rule=fault.rule, got=fault.got, remedy=remedy
+            ) from fault
+        done += len(batch)
+    return times
 
 
 def _within_described(info: ObjectInfo, group: int, times: Times, described: RowGroup) -> None:

@@ -16,6 +16,7 @@ from typing import Any, Protocol, runtime_checkable
 import numpy as np
 import pyarrow as pa
 from numpy.typing import NDArray
+
 from shardfold.ids import ObjectInfo
 from shardfold.readers.batch import refused
 
@@ -141,7 +142,8 @@ def column_times(column: Any) -> Times:
         On a null, NaN or infinite time, or one that 64 bits of nanoseconds cannot hold.
     """
     if column.null_count:
-        raise TimeFault("a time is missing", _first_true(column.is_null()), "every sample has a time", "null")
+        row = int(np.argmax(column.is_null().to_numpy(zero_copy_only=False)))
+        raise TimeFault("a time is missing", row, "every sample has a time", "null")
     kind = column.type
     if pa.types.is_floating(kind):
         return _float_times(column.to_numpy().astype(np.float64))
@@ -175,10 +177,6 @@ def _float_times(seconds: NDArray[np.float64]) -> Times:
         row = int(np.argmax(bad))
         raise TimeFault("a time is not usable", row, f"a finite number of seconds; {RANGE_RULE}", f"{seconds[row]!r}")
     return nanoseconds.astype(np.int64)
-
-
-def _first_true(mask: Any) -> int:
-    return int(np.argmax(mask.to_numpy(zero_copy_only=False) if isinstance(mask, pa.Array) else mask.to_numpy()))
 
 
 def _time_in_name(pattern: str, info: ObjectInfo) -> tuple[int, bool]:

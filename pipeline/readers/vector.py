@@ -14,13 +14,13 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 from numpy.typing import NDArray
+
 from shardfold.channels import keep_names
 from shardfold.ids import ObjectInfo
 from shardfold.readers.batch import refused
 from shardfold.readers.columns import Columns, numeric_dtype
-from shardfold.readers.footer import Footer, gap_dtype, refusing
+from shardfold.readers.footer import Footer, gap_dtype, slices
 
-SLICE_BYTES = 2**19
 _LENGTH_RULE = "every row holds one list, all of one length"
 
 
@@ -50,41 +50,16 @@ class Vector:
         self, reader: Any, footer: Footer, group: int, columns: Columns, channels: Sequence[str]
     ) -> NDArray[Any]:
         """Return one row group's values, F order: the transpose of rows as stored."""
-        leaf, rows = columns.leaves[0], footer.rows[group]
+        leaf = columns.leaves[0]
         names = self._all_names(footer, leaf, footer.schema.field(self.values_column).type)
         picks = None if tuple(channels) == names else places(names, channels)
-        values = np.empty((rows, len(channels)), columns.dtype)
+        values = np.empty((footer.rows[group], len(channels)), columns.dtype)
         done = 0
-        for lists in self._slices(reader, footer, group, leaf, len(names) * columns.dtype.itemsize):
-            block = self._block(footer, group, done, lists, len(names), values.dtype)
+        for batch in slices(reader, footer, group, (leaf,), len(names) * columns.dtype.itemsize):
+            block = _block(footer, group, done, batch.column(0), len(names), values.dtype)
             values[done : done + len(block)] = block if picks is None else block[:, picks]
             done += len(block)
-        if done != rows:
-            place = f"row group {group}"
-            raise refused(footer.info, "rows are missing", place=place, rule=f"{rows} rows", got=f"{done} rows")
         return values.T
-
-    def _slices(self, reader: Any, footer: Footer, group: int, leaf: int, row_bytes: int) -> Any:
-        with refusing(footer.info, "the row group cannot be decoded", place=f"row group {group}"):
-            size = max(1, SLICE_BYTES // row_bytes)
-            for batch in reader.iter_batches(size, row_groups=[group], column_indices=[leaf], use_threads=False):
-                yield batch.column(0)
-
-    def _block(
-        self, footer: Footer, group: int, done: int, lists: Any, length: int, dtype: np.dtype[Any]
-    ) -> NDArray[Any]:
-        lengths = lists.value_lengths().fill_null(-1).to_numpy(zero_copy_only=False)
-        wrong = np.flatnonzero(lengths != length)
-        if wrong.size:
-            row = footer.first_rows[group] + done + int(wrong[0])
-            got = "null" if lengths[wrong[0]] < 0 else f"{lengths[wrong[0]]} values, not {length}"
-            raise refused(footer.info, "vector lengths differ", place=f"row {row}", rule=_LENGTH_RULE, got=got)
-        flat = lists.flatten()
-        if flat.null_count and dtype.kind != "f":
-            place = f"row group {group}"
-            raise refused(footer.info, "values are missing", place=place, rule="none, says the footer", got="nulls")
-        numbers: NDArray[Any] = flat.to_numpy(zero_copy_only=False)
-        return numbers.reshape(-1, length)
 
     def _all_names(self, footer: Footer, leaf: int, kind: Any) -> tuple[str, ...]:
         length = kind.list_size if pa.types.is_fixed_size_list(kind) else _common_length(footer, leaf)
@@ -112,6 +87,22 @@ def places(names: Sequence[str], channels: Sequence[str]) -> NDArray[np.intp]:
     """Return the place of each channel among the names."""
     place_of = {name: place for place, name in enumerate(names)}
     return np.array([place_of[channel] for channel in channels], dtype=np.intp)
+
+
+def _block(footer: Footer, group: int, done: int, lists: Any, length: int, dtype: np.dtype[Any]) -> NDArray[Any]:
+    """Return some rows' lists as an array ``(rows, length)``, without a copy where nothing is null."""
+    lengths = lists.value_lengths().fill_null(-1).to_numpy(zero_copy_only=False)
+    wrong = np.flatnonzero(lengths != length)
+    if wrong.size:
+        row = footer.first_rows[group] + done + int(wrong[0])
+        got = "null" if lengths[wrong[0]] < 0 else f"{lengths[wrong[0]]} values, not {length}"
+        raise refused(footer.info, "vector lengths differ", place=f"row {row}", rule=_LENGTH_RULE, got=got)
+    flat = lists.flatten()
+    if flat.null_count and dtype.kind != "f":
+        place, got = f"row group {group}", f"{flat.null_count} nulls"
+        raise refused(footer.info, "values are missing", place=place, rule="none, says the footer", got=got)
+    numbers: NDArray[Any] = flat.to_numpy(zero_copy_only=False)
+    return numbers.reshape(-1, length)
 
 
 def _is_list(kind: Any) -> bool:

@@ -1,0 +1,64 @@
+"""Fixtures that more than one test folder needs: one real S3 server per session, one fresh bucket per test."""
+
+from __future__ import annotations
+
+import os
+import re
+import sys
+from collections.abc import Iterator
+from dataclasses import dataclass
+from pathlib import Path
+from uuid import uuid4
+
+import pytest
+
+# Tests are imported by path (--import-mode=importlib); the two helpers beside this file are modules of their own.
+sys.path.insert(0, str(Path(__file__).parent))
+
+from seaweed import Seaweed
+from sniffing_proxy import SniffingProxy
+
+
+@dataclass(frozen=True)
+class Bucket:
+    """A fresh, empty bucket of the session's server."""
+
+    location: str
+    endpoint: str
+
+    @property
+    def bucket(self) -> str:
+        """Return the bucket's name."""
+        return self.location.removeprefix("s3://")
+
+
+@pytest.fixture(scope="session")
+def s3() -> Iterator[Seaweed]:
+    """Run one S3 server, its keys in this process's environment until the session ends."""
+    with Seaweed() as server:
+        before = {name: os.environ.get(name) for name in os.environ if name.startswith("AWS_")}
+        for name in set(before) - {"AWS_CA_BUNDLE"}:
+            del os.environ[name]
+        os.environ.update(server.environment)
+        try:
+            yield server
+        finally:
+            for name in server.environment:
+                os.environ.pop(name, None)
+            os.environ.update({name: value for name, value in before.items() if value is not None})
+
+
+@pytest.fixture
+def bucket(s3: Seaweed, request: pytest.FixtureRequest) -> Bucket:
+    """Make a bucket whose name begins with the test's."""
+    stem = re.sub(r"[^a-z0-9]+", "-", request.node.name.lower()).strip("-")[:40]
+    name = f"{stem}-{uuid4().hex[:12]}"
+    s3.make_bucket(name)
+    return Bucket(f"s3://{name}", s3.endpoint)
+
+
+@pytest.fixture
+def proxy(s3: Seaweed) -> Iterator[SniffingProxy]:
+    """Run a forwarder in front of the S3 server that counts requests and can spoil answers."""
+    with SniffingProxy(s3.endpoint) as forwarder:
+        yield forwarder
