@@ -16,7 +16,7 @@ import numpy as np
 from shardfold.errors import InputError
 from shardfold.local_s3 import Seaweed
 from shardfold.results import Result
-from shardfold.store import make_bucket, open_store
+from shardfold.store import open_store
 from shardfold.tables import mode_names
 from shardfold.tarnmoor import Closeness, channel_table, how_close, job_text, write_campaign
 
@@ -53,7 +53,7 @@ def stage(folder: Path, s3: bool) -> Iterator[Scene]:
         return
     with Seaweed(folder.resolve() / "s3-server") as server:
         os.environ.update(server.environment)
-        make_bucket("tarnmoor", server.endpoint)
+        server.make_bucket("tarnmoor")
         yield _write(folder, f"s3://tarnmoor/{CAMPAIGN}", f"s3://tarnmoor/{DOSSIER}", server.endpoint)
 
 

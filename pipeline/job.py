@@ -111,7 +111,7 @@ def parse_job(
         keys, more = _validated(root, faults, folder)
         faults += more
     if keys is None or faults:
-        listed = tuple(str(fault) for fault in sorted(set(faults)))
+        listed = tuple(str(fault) for fault in sorted(dict.fromkeys(faults), key=lambda fault: fault.spot))
         count = f"{len(listed)} fault{'s' if len(listed) > 1 else ''}"
         raise JobInvalid(f"the job has {count}", where=name, faults=listed)
     digest = digest_value([text, *overrides]) if overrides else digest_bytes(text.encode())

@@ -51,7 +51,8 @@ def resolve(written: str, folder: Path) -> str:
     if "*" in text:
         raise RuleBroken("must be a folder, not a pattern", "patterns belong into source.match")
     if slip := _SLIP.match(text):
-        raise RuleBroken("must have two slashes after the colon of a URL", f'write "{slip[1].lower()}://..."')
+        fixed = f"{slip[1].lower()}://{text[slip.end() :]}"
+        raise RuleBroken("must have two slashes after the colon of a URL", f'write "{fixed}"')
     return _resolved_url(text) if is_url(text) else _resolved_path(text, folder)
 
 
@@ -94,8 +95,8 @@ def _resolved_url(text: str) -> str:
         if not rest.startswith("/"):
             raise RuleBroken("must be an absolute path after file://", "write the path alone")
         return str(Path(rest).resolve())
-    if scheme == "s3" and not re.match(r"[A-Za-z0-9][\w.-]+(/|$)", rest):
-        raise RuleBroken("must name a bucket after s3://", "write s3://bucket/folder/")
+    if scheme == "s3" and not re.match(r"[A-Za-z0-9][\w.-]{2,62}(/|$)", rest):
+        raise RuleBroken("must name a bucket of 3 to 63 characters after s3://", "write s3://bucket/folder/")
     return f"{scheme}://{rest.rstrip('/') if scheme == 's3' else rest}"
 
 

@@ -41,8 +41,14 @@ class Written:
         return None if found is None else found.plain()
 
     def given(self, key: str) -> bool:
-        """Return whether a key is written at all, soundly or not."""
-        return self.root.at(tuple(key.split("."))) is not None
+        """Return whether a key is written and not left blank, soundly or not."""
+        found = self.root.at(tuple(key.split(".")))
+        return found is not None and not found.blank
+
+    def is_section(self, key: str) -> bool:
+        """Return whether a key holds keys, soundly or not."""
+        found = self.root.at(tuple(key.split(".")))
+        return found is not None and found.keys is not None
 
     def location(self, key: str) -> str | None:
         """Return a location in its one form."""
@@ -78,7 +84,7 @@ def broken_relations(root: Entry, faulty: frozenset[str], folder: Path) -> list[
 
 def _time_of_layout(written: Written) -> Iterator[Fault]:
     layout_name, time = written.value("source.layout"), written.value("source.time")
-    if not written.given("source.time") and written.entry("source") is not None:
+    if not written.given("source.time") and written.is_section("source"):
         example = "time: {from_name: REGEX, step: 125 ms}" if layout_name == "array" else "time: COLUMN"
         yield written.fault("source.time", "is needed and missing", f"write {example}, or time: none if there are none")
     elif layout_name == "array" and isinstance(time, str) and time != "none":

@@ -26,8 +26,11 @@ _TIME_RULE = (
 
 def one_line(text: str) -> str:
     """Return a name: not empty, one line."""
-    if not text.strip() or not text.isprintable():
-        raise RuleBroken("must be a name on one line, not empty")
+    if not text.strip():
+        raise RuleBroken("must not be empty")
+    odd = next((letter for letter in text if not letter.isprintable()), "")
+    if odd:
+        raise RuleBroken(f"must be one line of printable characters; U+{ord(odd):04X} is none", "remove that character")
     return text
 
 

@@ -5,7 +5,7 @@ Works on plain records (type, location, context) and knows the models only as a 
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
 from shardfold.job_faults import Fault, nearest, one_of
@@ -39,7 +39,9 @@ def fault_of(error: Mapping[str, Any], root: Entry, keys: dict[Path, Key]) -> Fa
     if isinstance(broken, RuleBroken):
         rule, remedy = broken.rule, broken.remedy
     else:
-        rule, remedy = _standard(kind, path, entry, keys.get(path, Key()))
+        rule, remedy = _standard(kind, location, entry, keys.get(path, Key()))
+    if entry.blank and not remedy:
+        remedy = _NEEDED.get(".".join(path), "write a value, or leave the line out for the default")
     return Fault(entry.spot, ".".join(path), rule, entry.shown(), remedy)
 
 
@@ -57,28 +59,26 @@ def _deepest(root: Entry, location: Iterable[str | int]) -> Entry:
     return entry
 
 
-def _standard(kind: str, path: Path, entry: Entry, key: Key) -> tuple[str, str]:
+def _standard(kind: str, location: Sequence[str | int], entry: Entry, key: Key) -> tuple[str, str]:
     """Return rule and remedy of a value of the wrong type, or that is none of the listed words."""
-    last = path[-1] if path else ""
-    if entry.value is None and entry.keys is None and entry.items is None:
-        return "needs a value", "write one, or leave the line out"
+    label = f"{location[-1]}: " if location and isinstance(location[-1], str) else ""
     if kind == "literal_error":
         near = nearest(entry.written, key.words)
         return f"must be {one_of(key.words)}", f"did you mean {near}?" if near else ""
     if kind == "string_type":
-        return "must be text", _quoted(last, entry)
+        return "must be text", _quoted(label, entry)
     if kind == "tuple_type":
-        return "must be a list", f'write {last}: ["{entry.written}"]' if entry.written else f"write {last}: [...]"
+        return "must be a list", f'write {label}["{entry.written}"]' if entry.written else f"write {label}[...]"
     if kind in ("model_type", "model_attributes_type"):
         return f"must hold keys of its own: {', '.join(key.below)}", ""
     if kind == "bool_type":
         truth = _TRUTH.get(entry.written.lower(), "")
-        return "must be true or false", f"write {last}: {truth}" if truth else ""
+        return "must be true or false", f"write {label}{truth}" if truth else ""
     return f"is not valid here ({kind})", ""
 
 
-def _quoted(last: str, entry: Entry) -> str:
+def _quoted(label: str, entry: Entry) -> str:
     if not entry.written:
         return ""
     reason = f"YAML reads {entry.written} as {str(entry.value).lower()}: " if isinstance(entry.value, bool) else ""
-    return f'{reason}write {last}: "{entry.written}"'
+    return f'{reason}write {label}"{entry.written}"'

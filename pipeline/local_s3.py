@@ -6,7 +6,6 @@ an extra of the package (``s3demo``), never needed by a run.
 
 from __future__ import annotations
 
-import http.client
 import json
 import os
 import shutil
@@ -18,7 +17,12 @@ import tempfile
 import time
 from pathlib import Path
 from types import TracebackType
+from typing import Any
 from uuid import uuid4
+
+import botocore.session
+from botocore.config import Config
+from botocore.exceptions import BotoCoreError, ClientError
 
 from shardfold.errors import InputError, StorageFailed
 
@@ -78,7 +82,7 @@ class Seaweed:
         self.access_key, self.secret_key = uuid4().hex, uuid4().hex
         master, volume, filer, s3 = free_ports(4)
         self.endpoint = f"http://{LOOPBACK}:{s3}"
-        self.port = s3
+        self._client = self._connect()
         self._write_identities()
         self._log = (self.folder / "server.log").open("wb")
         self._process = subprocess.Popen(
@@ -106,6 +110,10 @@ class Seaweed:
             "AWS_SHARED_CREDENTIALS_FILE": os.devnull,
         }
 
+    def make_bucket(self, name: str) -> None:
+        """Make a bucket."""
+        self._client.create_bucket(Bucket=name)
+
     def stop(self) -> None:
         """Kill the server; it does not end by SIGTERM within 15 s."""
         if self._process.poll() is None:
@@ -122,6 +130,16 @@ class Seaweed:
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
         self.stop()
+
+    def _connect(self) -> Any:
+        return botocore.session.Session().create_client(
+            "s3",
+            endpoint_url=self.endpoint,
+            region_name="us-east-1",
+            aws_access_key_id=self.access_key,
+            aws_secret_access_key=self.secret_key,
+            config=Config(retries={"total_max_attempts": 1}, connect_timeout=2, read_timeout=10),
+        )
 
     def _write_identities(self) -> None:
         keys = {"accessKey": self.access_key, "secretKey": self.secret_key}
@@ -153,14 +171,15 @@ class Seaweed:
         ]
 
     def _wait_ready(self) -> None:
-        """Wait until the S3 door answers and a first object can be written, which comes later."""
+        """Wait until the S3 door answers a signed request; it opens its port before that."""
         deadline = time.monotonic() + READY_SECONDS
-        while time.monotonic() < deadline:
-            if self._process.poll() is not None:
-                break
-            if self._answers():
+        while time.monotonic() < deadline and self._process.poll() is None:
+            try:
+                self._client.list_buckets()
+            except (BotoCoreError, ClientError):
+                time.sleep(0.05)
+            else:
                 return
-            time.sleep(0.05)
         log = (self.folder / "server.log").read_text(errors="replace")[-2000:]
         raise StorageFailed(
             "the local S3 server did not get ready",
@@ -168,13 +187,3 @@ class Seaweed:
             rule=f"an answer within {READY_SECONDS:g} s",
             got=log,
         )
-
-    def _answers(self) -> bool:
-        connection = http.client.HTTPConnection(LOOPBACK, self.port, timeout=2)
-        try:
-            connection.request("GET", "/healthz")
-            return connection.getresponse().status == 200
-        except OSError:
-            return False
-        finally:
-            connection.close()

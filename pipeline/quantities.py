@@ -74,7 +74,7 @@ def parse_duration(value: object) -> int:
     if unit.lower() in ("hz", "khz"):
         raise RuleBroken(wanted, _step_of_rate(number, unit))
     factor = _factor(number, unit, DURATION_UNITS, _DURATION_OTHER_NAMES, wanted)
-    return _whole(number * factor, "nanoseconds", "ns")
+    return _whole(number * factor, "nanoseconds", DURATION_UNITS)
 
 
 def parse_bytes(value: object) -> int:
@@ -93,7 +93,7 @@ def parse_bytes(value: object) -> int:
     wanted = 'must be a size: a number and a unit (B, kB, MB, GB, TB, KiB, MiB, GiB or TiB), such as "2 GiB"'
     _refuse_bare_number(value, wanted, ("MiB", "GiB"))
     number, unit = _split(value, wanted)
-    return _whole(number * _factor(number, unit, BYTE_UNITS, _BYTE_OTHER_NAMES, wanted), "bytes", "B")
+    return _whole(number * _factor(number, unit, BYTE_UNITS, _BYTE_OTHER_NAMES, wanted), "bytes", BYTE_UNITS)
 
 
 def parse_instant(value: object) -> int:
@@ -157,9 +157,10 @@ def _factor(number: Decimal, unit: str, units: dict[str, int], other_names: dict
     raise RuleBroken(wanted, f'write "{number} {meant}"' if meant else f"{unit} is not one of the units")
 
 
-def _whole(amount: Decimal, plural: str, unit: str) -> int:
+def _whole(amount: Decimal, plural: str, units: dict[str, int]) -> int:
     if amount != amount.to_integral_value():
-        raise RuleBroken(f"must be a whole number of {plural}", f'the nearest is "{amount.to_integral_value()} {unit}"')
+        nearest = _format(int(amount.to_integral_value()), units)
+        raise RuleBroken(f"must be a whole number of {plural}", f'the nearest is "{nearest}"')
     if amount > _LARGEST:
         raise RuleBroken(f"must be at most 2**63 - 1 {plural}")
     return int(amount)

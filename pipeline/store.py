@@ -12,7 +12,6 @@ import time
 from collections.abc import Callable
 from functools import lru_cache
 from pathlib import Path
-from urllib.parse import urlsplit
 
 from shardfold.errors import InputError
 from shardfold.store_local import LocalAdapter
@@ -35,6 +34,8 @@ __all__ = [
 ATTEMPTS = 4
 
 _SCHEME = re.compile(r"^([a-z][a-z0-9+.-]+)://", re.IGNORECASE)
+_USER = re.compile(r"^[a-z][a-z0-9+.-]*://[^/]*@", re.IGNORECASE)
+_NOWHERE = re.compile(r"^(s3:///.*|s3://|)$", re.IGNORECASE)
 _ENDPOINT = re.compile(r"^https?://[^/@\s?#]+/?$", re.IGNORECASE)
 
 
@@ -95,17 +96,8 @@ def _connect(settings: StoreSettings, process: int) -> Counting:
 
 
 def _adapter(settings: StoreSettings) -> Adapter:
+    _check(settings)
     scheme = _scheme(settings.location)
-    for what, url in (("location", settings.location if scheme else ""), ("endpoint", settings.endpoint or "")):
-        if "@" in urlsplit(url).netloc:
-            raise InputError(
-                f"the {what} holds a user or password",
-                rule="secrets come from the usual environment and profiles alone",
-                remedy="take out everything before the @",
-            )
-    if settings.endpoint is not None and not _ENDPOINT.match(settings.endpoint):
-        rule, remedy = "http://HOST:PORT or https://HOST", "correct storage.endpoint"
-        raise InputError("the endpoint is no address", where=settings.location, rule=rule, remedy=remedy)
     if scheme in ("", "file"):
         return LocalAdapter(_path(settings.location))
     # The adapters below cost half a second to import, which a local run does without.
@@ -116,6 +108,24 @@ def _adapter(settings: StoreSettings) -> Adapter:
     from shardfold.store_readonly import ReadOnlyAdapter
 
     return ReadOnlyAdapter(settings)
+
+
+def _check(settings: StoreSettings) -> None:
+    """Refuse what could never be reached, and secrets in the wrong place, without repeating them."""
+    for what, url in (("location", settings.location), ("endpoint", settings.endpoint or "")):
+        if _USER.match(url):
+            raise InputError(
+                f"the {what} holds a user or password",
+                rule="secrets come from the usual environment and profiles alone",
+                remedy="take out everything before the @",
+            )
+    if settings.endpoint is not None and not _ENDPOINT.match(settings.endpoint):
+        rule, remedy = "http://HOST:PORT or https://HOST", "correct storage.endpoint"
+        raise InputError("the endpoint is no address", where=settings.location, rule=rule, remedy=remedy)
+    if _NOWHERE.match(settings.location):
+        raise InputError(
+            "the location names no bucket or folder", where=settings.location, rule="s3://BUCKET/PREFIX or a folder"
+        )
 
 
 def _scheme(location: str) -> str:

@@ -11,6 +11,7 @@ from datetime import datetime
 from typing import Any, TypeVar
 
 import fsspec
+
 from shardfold.errors import AccessDenied, InputError, NothingToRead
 from shardfold.ids import ObjectInfo
 from shardfold.store_promises import (

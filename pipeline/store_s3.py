@@ -17,6 +17,7 @@ from urllib.parse import urlsplit
 import fsspec.asyn
 import s3fs
 from botocore.exceptions import ClientError
+
 from shardfold.errors import InputError, NothingToRead, ShardfoldError
 from shardfold.ids import ObjectInfo
 from shardfold.store_promises import (
@@ -37,6 +38,7 @@ LANES = 4
 """Requests of one read that are under way at once."""
 
 CHUNK_BYTES = 2**20
+PAGE_KEYS = 1000
 QUOTE = '"'
 _TOKEN = "shardfold-create"
 _CONFIG = {
@@ -55,10 +57,8 @@ class S3Adapter:
     writable = True
 
     def __init__(self, settings: StoreSettings) -> None:
-        parts = urlsplit(settings.location, allow_fragments=False)
-        # urlsplit takes "?" for the start of a query; in a key it is a letter.
-        path = settings.location.removeprefix(f"{parts.scheme}://{parts.netloc}").strip("/")
-        self.bucket, self.prefix = parts.netloc, f"{path}/" if path else ""
+        self.bucket, _, path = settings.location.partition("://")[2].partition("/")
+        self.prefix = f"{path.strip('/')}/" if path.strip("/") else ""
         self._endpoint = settings.endpoint or ""
         self._bucket_seen = False
         self._files = s3fs.S3FileSystem(
@@ -80,11 +80,13 @@ class S3Adapter:
         return f"s3://{self.bucket}/{self.prefix}{key}" + (f" at {self._endpoint}" if self._endpoint else "")
 
     def page(self, prefix: str, bookmark: str | None) -> tuple[list[ObjectInfo], str | None]:
-        """Return up to 1000 objects."""
-        more = {"ContinuationToken": bookmark} if bookmark else {}
+        """Return up to ``PAGE_KEYS`` objects."""
+        more: dict[str, Any] = {"ContinuationToken": bookmark} if bookmark else {}
 
         async def ask(client: Any) -> Any:
-            return await client.list_objects_v2(Bucket=self.bucket, Prefix=self.prefix + prefix, **more)
+            return await client.list_objects_v2(
+                Bucket=self.bucket, Prefix=self.prefix + prefix, MaxKeys=PAGE_KEYS, **more
+            )
 
         answer = self._call("", ask)
         found = (
@@ -291,4 +293,3 @@ def _total(answer: Any) -> int:
     """Return the size of the whole object that a ranged answer names; 0 where the server ignored the range."""
     total = answer.get("ContentRange", "").rpartition("/")[2]
     return int(total) if total.isdecimal() else 0
-

@@ -12,6 +12,7 @@ import aiohttp
 from botocore import exceptions as boto
 from botocore.httpchecksum import FlexibleChecksumError
 from botocore.parsers import ResponseParserError
+
 from shardfold.errors import AccessDenied, InputError, NothingToRead, ShardfoldError, StorageFailed
 from shardfold.store_promises import Busy, Transient
 

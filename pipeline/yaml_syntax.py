@@ -46,30 +46,35 @@ def _meaning(lines: list[str], complaint: Complaint) -> tuple[tuple[int, int], s
     sign = re.search(r"scanning an (alias|anchor)|undefined (alias)|cannot start any (token)", words)
     if sign:
         at = complaint.at if "undefined" in words or "token" in words else complaint.since
-        return at, *_unquoted(lines, at)
+        return _unquoted(lines, at)
     for pattern, began, rule, remedy in _MEANINGS:
         if re.search(pattern, words):
             return complaint.since if began else complaint.at, rule, remedy
     return _structure(lines, complaint, words)
 
 
-def _unquoted(lines: list[str], at: tuple[int, int]) -> tuple[str, str]:
+def _unquoted(lines: list[str], at: tuple[int, int]) -> tuple[tuple[int, int], str, str]:
+    """Return the meaning of a value that starts with a sign, or of a pattern such as [0-9]*.parquet taken for a list."""
     line = lines[at[0]] if at[0] < len(lines) else ""
-    sign = line[at[1] : at[1] + 1]
-    rule = f"a value that starts with {sign} needs quotes: the sign has a meaning of its own in YAML"
-    keys = _KEYS.findall(line[: at[1]])
-    inner = re.search(r"[\[{]", line[: at[1]]) is not None
-    found = re.match(r"[^\s,\]}]+" if inner else r".+?(?=\s+#|\s*$)", line[at[1] :])
-    value = _whole_glob(line, at[1]) if line[at[1] - 1 : at[1]] == "]" else (found[0] if found else "")
+    column = _start_of_pattern(line, at[1])
+    before, value = line[:column], line[column:]
+    rule = f"a value that starts with {value[:1]} needs quotes: the sign has a meaning of its own in YAML"
+    inner = re.search(r":\s+[\[{]", before) is not None
+    found = re.match(r"[^\s,\]}]+" if inner else r".+?(?=\s+#|\s*$)", value)
+    keys = _KEYS.findall(before)
+    return (at[0], column), rule, _in_quotes(found[0] if found else "", "" if inner else "".join(keys[-1:]), keys)
+
+
+def _start_of_pattern(line: str, column: int) -> int:
+    found = re.match(r"\s*(?:- )?[\w.-]+:\s+(?=\[[^\s,]*\]\S)", line)
+    return found.end() if found and line[column - 1 : column] == "]" else column
+
+
+def _in_quotes(value: str, key: str, keys: list[str]) -> str:
+    """Return what to write, unless it could show a secret."""
     if not value or '"' in value or "\\" in value or holds_secret(value) or looks_secret(("storage", *keys[-1:])):
-        return rule, "put it in quotes"
-    return rule, f'write {keys[-1] + ": " if keys and not inner else ""}"{value}"'
-
-
-def _whole_glob(line: str, column: int) -> str:
-    """Return the whole value where a pattern such as [0-9]*.parquet was taken for a list."""
-    found = re.match(r".*?:\s+(\S+)", line)
-    return found[1] if found and found.start(1) < column < found.end(1) else ""
+        return "put it in quotes"
+    return f'write {key}: "{value}"' if key else f'write "{value}"'
 
 
 _MEANINGS = (
@@ -84,8 +89,8 @@ _MEANINGS = (
     ("document start", False, "text follows after the end of the document", "remove the line ... above"),
     ("sequence entries are not allowed", False, "a list must start on a line of its own", "write [a, b] on this line"),
     ("scanning a directive", False, "a line that starts with % needs quotes", "put the text in quotes"),
-    ("flow sequence.*expected", True, "the list that opens with [ here is not closed", "close it with ]"),
-    ("flow mapping.*expected", True, "the mapping that opens with { here is not closed", "close it with }"),
+    ("flow sequence.*expected", True, "the list that opens with [ here is not closed", "close it with ], and put values that hold , [ ] { } or # in quotes"),
+    ("flow mapping.*expected", True, "the mapping that opens with { here is not closed", "close it with }, and put values that hold , [ ] { } or # in quotes"),
     ("a tag|tag handle", False, "a value that starts with ! needs quotes", "put the value in quotes"),
 )
 
@@ -104,7 +109,8 @@ def _structure(lines: list[str], complaint: Complaint, words: str) -> tuple[tupl
         return complaint.at, "text follows after a closed quote or bracket", "put the whole value in one pair of quotes"
     if "<block end>" in words:
         return complaint.at, "the indentation fits no line above", "align the key with its neighbours"
-    return complaint.at, f"is not valid YAML here: {complaint.problem}", ""
+    problem = re.sub(r"'[^'<]{2,}'", "...", complaint.problem)  # names of anchors and tags may be secrets
+    return complaint.at, f"is not valid YAML here: {problem}", ""
 
 
 def _glued(lines: list[str], complaint: Complaint) -> tuple[int, int] | None:

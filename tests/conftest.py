@@ -35,17 +35,12 @@ class Bucket:
 @pytest.fixture(scope="session")
 def s3() -> Iterator[Seaweed]:
     """Run one S3 server, its keys in this process's environment until the session ends."""
-    with Seaweed() as server:
-        before = {name: os.environ.get(name) for name in os.environ if name.startswith("AWS_")}
-        for name in set(before) - {"AWS_CA_BUNDLE"}:
-            del os.environ[name]
-        os.environ.update(server.environment)
-        try:
-            yield server
-        finally:
-            for name in server.environment:
-                os.environ.pop(name, None)
-            os.environ.update({name: value for name, value in before.items() if value is not None})
+    with Seaweed() as server, pytest.MonkeyPatch.context() as patch:
+        for name in [name for name in os.environ if name.startswith("AWS_")]:
+            patch.delenv(name)
+        for name, value in server.environment.items():
+            patch.setenv(name, value)
+        yield server
 
 
 @pytest.fixture

@@ -33,13 +33,13 @@ LAYERS = (
     "gather tasks executor",
     "executor_ray site ingest sums finish",
     "run forecast",
-    "results tarnmoor demo progress cli __init__",
+    "results tarnmoor demo progress cli __init__ __main__",
 )
 
 # Who may import a foreign library. NumPy and SciPy are open to all.
 DOORS = {
     "ray": ("executor_ray",),
-    "s3fs": ("store*",), "fsspec": ("store*",), "botocore": ("store*",), "aiohttp": ("store*",),
+    "s3fs": ("store*",), "fsspec": ("store*",), "botocore": ("store*", "local_s3"), "aiohttp": ("store*",),
     "yaml": ("job*", "yaml*"), "pydantic": ("job*", "yaml*"),
     "pyarrow": ("readers*", "artifacts", "channels", "results", "tarnmoor", "tables"),
     "click": ("cli",), "rich": ("cli", "progress"),
@@ -404,7 +404,7 @@ def test_documented_commands_exist_and_existing_ones_are_documented():
 
 
 def test_documented_job_keys_exist_and_existing_ones_are_documented():
-    """Jobs in configs/ are sound, YAML in the documents has no unknown key, every key stands in one or the other."""
+    """Jobs in configs/ are sound and show every key, if only in a comment; documents name no unknown key."""
     known = job.known_keys()
     texts = {f"configs/{path.name}": path.read_text(encoding="utf-8") for path in (ROOT / "configs").glob("*.yaml")}
     assert texts, "configs/ holds no job"
@@ -420,6 +420,6 @@ def test_documented_job_keys_exist_and_existing_ones_are_documented():
     dotted = {word for word in words if re.fullmatch(rf"({sections})(\.[a-z_]+)+", word)}
     files = {word for word in dotted if word.endswith((".json", ".py", ".parquet"))}
     faults += [f"no key {word}" for word in sorted(dotted - files - set(known))]
-    everything = "\n".join([*texts.values(), *words])
+    shown = "\n".join(text for name, text in texts.items() if name.startswith("configs/"))
     leaves = {key.split(".")[-1] for key in known} - {part for key in known for part in key.split(".")[:-1]}
-    complain(faults + [f"not documented: {k}" for k in sorted(leaves) if not re.search(rf"\b{k}\b", everything)])
+    complain(faults + [f"configs/ show no {leaf}:" for leaf in sorted(leaves) if not re.search(rf"\b{leaf}:", shown)])

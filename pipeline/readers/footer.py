@@ -24,7 +24,7 @@ TAIL_BYTES = 64 * 2**10
 # A request costs about as long as a MiB of transfer, so a gap smaller than that is read over.
 GAP_BYTES = 2**20
 # Measured: smaller slices cost time, larger ones memory (pyarrow holds several times a slice while it decodes one).
-SLICE_BYTES = 2**20
+SLICE_BYTES = 2**19
 _TRAILER_BYTES = 8
 _REFETCH = "copy the shard again from where it was made"
 

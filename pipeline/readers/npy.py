@@ -18,12 +18,14 @@ from numpy.typing import NDArray
 
 from shardfold.channels import keep_names
 from shardfold.ids import ObjectInfo, RowGroup, Shard
-from shardfold.readers.batch import Batch, ByteSource, refused
+from shardfold.readers.batch import SCRATCH_BYTES, Batch, ByteSource, refused
 from shardfold.readers.times import Grid, TimeRule, grid_of
 from shardfold.readers.vector import channel_names, places
 
 GROUP_BYTES = 8 * 2**20
 HEAD_BYTES = 4096
+_COPY_BYTES = 2**20
+_TIME_BYTES = 8
 _SAMPLES_BY_CHANNELS = "samples_by_channels"
 _RULE = "a .npy file of two dimensions of integers or floats of at most 64 bits"
 
@@ -63,12 +65,13 @@ class NpyReader:
     def describe(self, store: ByteSource, info: ObjectInfo) -> Shard:
         """Describe a shard from its header; see `Reader`."""
         header = read_header(store, info, self.orient)
-        channels = keep_names(self._all_names(header), self.include, self.exclude)
+        names = self._all_names(header)
+        channels = keep_names(names, self.include, self.exclude)
+        wanted = places(names, channels)
         grid = grid_of(self.time, info, header.samples)
         step = header.group_rows
         groups = (
-            _group(header, len(channels), row, min(step, header.samples - row), grid)
-            for row in range(0, header.samples, step)
+            _group(header, wanted, row, min(step, header.samples - row), grid) for row in range(0, header.samples, step)
         )
         return Shard(info, tuple(groups), channels, str(header.native), bool(grid and grid.zoned))
 
@@ -77,18 +80,20 @@ class NpyReader:
     ) -> Iterator[Batch]:
         """Yield the batches of some row groups; see `Reader`."""
         header = read_header(store, shard.info, self.orient)
-        names = self._all_names(header)
-        picks = None if tuple(channels) == names else places(names, channels)
+        wanted = places(self._all_names(header), channels)
         grid = grid_of(self.time, shard.info, header.samples)
         for group in range(first_group, stop_group):
-            first_row, rows = group * header.group_rows, shard.groups[group].rows
-            read = _sample_major if header.sample_major else _channel_major
-            values = read(store, header, first_row, rows, picks)
-            yield Batch(first_row, grid.times(first_row, rows) if grid else None, values)
+            first_row = group * header.group_rows
+            rows = min(header.group_rows, header.samples - first_row)
+            times = grid.times(first_row, rows) if grid else None
+            if header.sample_major:
+                yield Batch(first_row, times, _sample_major(store, header, first_row, rows, wanted))
+            else:
+                yield Batch(first_row, times, _channel_major(store, header, wanted))
 
     def group_peak_bytes(self, group: RowGroup) -> int:
         """Return an upper bound of the private bytes held while one row group is read: its values and one part."""
-        return max(group.stored_bytes, group.decoded_bytes) + GROUP_BYTES
+        return max(group.stored_bytes, group.decoded_bytes) + GROUP_BYTES + SCRATCH_BYTES
 
     def _all_names(self, header: Header) -> tuple[str, ...]:
         return channel_names(header.info, header.channels, self.names)
@@ -132,38 +137,63 @@ def _parse(info: ObjectInfo, head: bytes) -> tuple[tuple[int, ...], bool, np.dty
     return shape, fortran, dtype, stream.tell()
 
 
-def _group(header: Header, kept: int, first_row: int, rows: int, grid: Grid | None) -> RowGroup:
+def _group(header: Header, wanted: NDArray[np.intp], first_row: int, rows: int, grid: Grid | None) -> RowGroup:
     item = header.dtype.itemsize
+    stored = rows * header.channels * item
+    if not header.sample_major and len(wanted) < header.channels:
+        stored = sum((strip.stop - strip.start) * item for strip in _strips(header, wanted))
+    decoded = rows * (len(wanted) * item + (_TIME_BYTES if grid else 0))
     first, last = grid.span(first_row, rows) if grid else (None, None)
-    return RowGroup(rows, rows * header.channels * item, rows * kept * item, first, last)
+    return RowGroup(rows, stored, decoded, first, last)
 
 
 def _sample_major(
-    store: ByteSource, header: Header, first_row: int, rows: int, picks: NDArray[np.intp] | None
+    store: ByteSource, header: Header, first_row: int, rows: int, wanted: NDArray[np.intp]
 ) -> NDArray[Any]:
-    flat = _part(store, header, first_row * header.channels, (first_row + rows) * header.channels)
-    block = flat.reshape(rows, header.channels)
-    return _native(block if picks is None else block[:, picks], header).T
+    m = header.channels
+    block = _part(store, header, first_row * m, (first_row + rows) * m).reshape(rows, m)
+    if _is_all(wanted, m):
+        return block.astype(header.native, copy=False).T
+    values = np.empty((rows, len(wanted)), header.native)
+    step = max(1, _COPY_BYTES // (m * header.dtype.itemsize))
+    for row in range(0, rows, step):
+        values[row : row + step] = block[row : row + step, wanted]
+    return values.T
 
 
-def _channel_major(
-    store: ByteSource, header: Header, first_row: int, rows: int, picks: NDArray[np.intp] | None
-) -> NDArray[Any]:
-    if picks is None and header.dtype.isnative:
-        return _part(store, header, 0, header.channels * rows).reshape(header.channels, rows)
-    picks = np.arange(header.channels) if picks is None else picks
-    values = np.empty((len(picks), rows), header.native)
-    step = max(1, GROUP_BYTES // header.dtype.itemsize)
-    for row, channel in enumerate(picks):
-        for start in range(0, rows, step):
-            stop = min(start + step, rows)
-            values[row, start:stop] = _part(store, header, channel * rows + start, channel * rows + stop)
+def _channel_major(store: ByteSource, header: Header, wanted: NDArray[np.intp]) -> NDArray[Any]:
+    m, n = header.channels, header.samples
+    if _is_all(wanted, m) and header.dtype.isnative:
+        return _part(store, header, 0, m * n).reshape(m, n)
+    values = np.empty((len(wanted), n), header.native)
+    row_of = {int(channel): row for row, channel in enumerate(wanted)}
+    for strip in _strips(header, wanted):
+        block = _part(store, header, strip.start, strip.stop)
+        sample = strip.start % n
+        for at in range(0, len(block), n - sample):
+            row = row_of.get((strip.start + at) // n)
+            if row is not None:
+                part = block[at : at + n - sample]
+                values[row, sample : sample + len(part)] = part
     return values
 
 
+def _strips(header: Header, wanted: NDArray[np.intp]) -> Iterator[range]:
+    """Yield the runs of elements of a channel-major file to fetch: some whole channels, or part of a long one."""
+    n, item = header.samples, header.dtype.itemsize
+    together = max(1, GROUP_BYTES // (n * item))
+    for first in range(0, header.channels, together):
+        inside = wanted[(wanted >= first) & (wanted < first + together)]
+        if inside.size:
+            start, stop = int(inside.min()) * n, (int(inside.max()) + 1) * n
+            step = stop - start if together > 1 else max(1, GROUP_BYTES // item)
+            yield from (range(at, min(at + step, stop)) for at in range(start, stop, step))
+
+
 def _part(store: ByteSource, header: Header, start: int, stop: int) -> NDArray[Any]:
+    """Return the elements ``start <= i < stop`` of the file, in its byte order, as a view of what was fetched."""
     info, item = header.info, header.dtype.itemsize
-    first, last = header.offset + int(start) * item, header.offset + int(stop) * item
+    first, last = header.offset + start * item, header.offset + stop * item
     data = store.read(info.key, version=info.version, start=first, stop=last)
     if len(data) != last - first:
         got = f"{len(data)} of {last - first} bytes"
@@ -171,5 +201,5 @@ def _part(store: ByteSource, header: Header, start: int, stop: int) -> NDArray[A
     return np.frombuffer(data, header.dtype)
 
 
-def _native(block: NDArray[Any], header: Header) -> NDArray[Any]:
-    return np.ascontiguousarray(block, dtype=header.native)
+def _is_all(wanted: NDArray[np.intp], channels: int) -> bool:
+    return len(wanted) == channels and bool((wanted == np.arange(channels)).all())

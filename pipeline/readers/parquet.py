@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from shardfold.ids import ObjectInfo, RowGroup, Shard
 from shardfold.readers.batch import Batch, ByteSource, group_peak_bytes, refused, some_names
 from shardfold.readers.columns import Columns
-from shardfold.readers.footer import Footer, open_group, read_footer, slices, spans_to_read
+from shardfold.readers.footer import Footer, open_group, read_footer, refusing, slices, spans_to_read
 from shardfold.readers.times import (
     ColumnRule,
     Grid,
@@ -78,7 +78,8 @@ class ParquetReader:
         if not sum(footer.rows):
             raise refused(info, "the shard holds no samples", rule="at least one row", got="0 rows")
         time_field = _time_field(footer, self.time)
-        columns = self.layout.find(footer, time_field)
+        with refusing(info, "the footer cannot be understood"):
+            columns = self.layout.find(footer, time_field)
         return _Opened(footer, columns, time_field, grid_of(self.time, info, sum(footer.rows)))
 
     def _batch(
@@ -120,7 +121,8 @@ def _describe_group(store: ByteSource, shard: _Opened, group: int) -> RowGroup:
     rows = shard.footer.rows[group]
     if not rows:
         return RowGroup(0, 0, 0, None, None)
-    spans = spans_to_read(shard.footer, group, shard.needed(shard.columns.leaves))
+    with refusing(shard.footer.info, "the footer cannot be understood", place=f"row group {group}"):
+        spans = spans_to_read(shard.footer, group, shard.needed(shard.columns.leaves))
     row_bytes = len(shard.columns.channels) * shard.columns.dtype.itemsize
     row_bytes += _TIME_BYTES * (shard.time_field is not None or shard.grid is not None)
     first, last = _group_span(store, shard, group)
@@ -135,7 +137,9 @@ def _group_span(store: ByteSource, shard: _Opened, group: int) -> tuple[int | No
     if shard.time_field is None:
         return None, None
     (leaf,) = footer.leaves[shard.time_field]
-    known = statistics_span(footer.metadata.row_group(group).column(leaf), footer.schema.field(shard.time_field).type)
+    kind = footer.schema.field(shard.time_field).type
+    with refusing(footer.info, "the footer cannot be understood", place=f"row group {group}"):
+        known = statistics_span(footer.metadata.row_group(group).column(leaf), kind)
     if known:
         return known
     times = _read_times(open_group(store, footer, group, [leaf]), footer, group, shard.time_field)

@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import itertools
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 import pytest
+from threadpoolctl import threadpool_limits
+
 from shardfold.kernels import addressed, factors
 from shardfold.kernels.blocks import Preparation
 from shardfold.kernels.whole import Probe, Shape, Summary, XBlock, fold_block, stored_dtype, zero
@@ -93,6 +95,13 @@ class Lab:
     def angle(self, a: np.ndarray, b: np.ndarray) -> float:
         """Return the sine of the angle between two unit vectors."""
         return float(np.linalg.norm(a - b * (a @ b)))
+
+
+@pytest.fixture(scope="session", autouse=True)
+def one_blas_thread() -> Iterator[None]:
+    """Run as a task does; it is also quicker on shared machines."""
+    with threadpool_limits(1):
+        yield
 
 
 @pytest.fixture(scope="session")

@@ -63,8 +63,12 @@ def test_the_next_probe_has_unit_rows_exact_in_single_precision(lab: Any) -> Non
     np.testing.assert_allclose(np.linalg.norm(rows, axis=1), 1, rtol=1e-6)
     np.testing.assert_allclose(rows[:30] @ rows[:30].T, np.eye(30), atol=1e-6)
     # Theta never enters: the probe does not change with the checks.
-    assert np.array_equal(factors.next_probe(lab.fold(lab.with_spectrum(300, 200, 1 / J[:100]) + 2, 30, checks=0).summary,
-                                             RANK, 1, 2, folded.keys)[-14:], rows[-14:])
+    assert np.array_equal(
+        factors.next_probe(
+            lab.fold(lab.with_spectrum(300, 200, 1 / J[:100]) + 2, 30, checks=0).summary, RANK, 1, 2, folded.keys
+        )[-14:],
+        rows[-14:],
+    )
     later = factors.next_probe(folded.summary, RANK, 1, 3, folded.keys)
     assert not np.array_equal(later[-14:], rows[-14:])
     assert np.array_equal(later[:31], rows[:31])

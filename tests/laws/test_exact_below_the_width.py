@@ -11,6 +11,7 @@ from hypothesis import strategies as st
 
 from shardfold.kernels import factors
 from shardfold.kernels.blocks import Preparation
+from shardfold.kernels.whole import zero
 
 EPS = np.finfo(np.float64).eps
 
@@ -58,7 +59,7 @@ def test_single_precision_input(lab: Any, order: Any) -> None:
     folded = lab.fold(matrix, 20, cuts=[100, 200])
     made = factors.finish(folded.summary)
     truth_left, truth, _ = np.linalg.svd(centred(matrix), full_matrices=False)
-    np.testing.assert_allclose(made.values[:5], truth[:5], rtol=1e-12)
+    np.testing.assert_allclose(made.values[:5], truth[:5], rtol=1e-10)
     for i in range(5):
         assert lab.angle(made.modes[:, i], truth_left[:, i]) < 1e-10
     rebuilt = made.modes[:, :5] @ folded.coefficients(made, 5)
@@ -100,7 +101,7 @@ def test_nothing_below_the_floor_is_a_mode(lab: Any) -> None:
     for width in (None, 20):
         matrix = lab.with_spectrum(45, 100, values)
         made = factors.finish(lab.fold(matrix, width).summary)
-        assert made.floor == pytest.approx(np.sqrt(EPS), rel=1e-3)
+        assert made.floor == pytest.approx(2 * np.sqrt(EPS), rel=1e-3)
         assert made.values.min() > made.floor
         np.testing.assert_allclose(made.values[:3], values[:3], rtol=1e-2)
         assert made.values.size <= 6  # three real ones and at most a little noise just above the floor
@@ -137,7 +138,5 @@ def test_an_empty_summary_and_too_high_a_rank_are_refused(lab: Any) -> None:
     block = folded.blocks[0]
     with pytest.raises(ValueError, match="rank: must be between 0 and 2; got 3"):
         factors.coefficients(made, 3, block.x, block.centre, block.centre)
-    from shardfold.kernels.whole import zero
-
     with pytest.raises(ValueError, match="summary.n: must be at least 1; got 0"):
         factors.finish(zero(folded.summary.shape))
