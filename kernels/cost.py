@@ -10,7 +10,7 @@ from .whole import Shape, chunk_channels
 
 BLOCK_BYTES = 16 << 20
 LEAST_BLOCK_SAMPLES, MOST_BLOCK_SAMPLES = 64, 4096
-SMALL_BYTES = 64 << 10  # Python objects, views and loop buffers
+SMALL_BYTES = 192 << 10  # Python objects, views, and the two buffers of 64 KiB that NumPy's loops may take
 
 _FLOAT = 8
 
@@ -53,7 +53,7 @@ def fold_bytes(shape: Shape, samples: int, itemsize: int) -> int:
 
 def merge_bytes(shape: Shape) -> int:
     """Return the peak bytes of ``merge``: the result and one outer product."""
-    return summary_bytes(shape) + _FLOAT * (shape.m * shape.s + 4 * shape.m) + SMALL_BYTES
+    return summary_bytes(shape) + _FLOAT * (max(shape.m, shape.s) * shape.s + 8 * shape.m) + SMALL_BYTES
 
 
 def finish_bytes(shape: Shape) -> int:

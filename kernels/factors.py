@@ -249,6 +249,11 @@ def _fresh_rows(k: int, rank: int) -> int:
     return max(14, rank, -(-k // 3))
 
 
+def probe_width(width: int, rank: int) -> int:
+    """Return the most rows the next read's probe has: the directions of this one's and the random rows."""
+    return width + max(14, rank, -(-width // 3))
+
+
 def _floor(summary: Summary, keep_mean: bool) -> float:
     mean_square = float(summary.mean @ summary.mean)
     energy = float(summary.energy.sum())

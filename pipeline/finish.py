@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
+from typing import Any
 
 import numpy as np
+import numpy.typing as npt
 
 from shardfold import layout
 from shardfold.blas import one_thread
@@ -19,7 +21,9 @@ from shardfold.kernels.spectra import dominant_frequency
 from shardfold.kernels.whole import Shape, Summary
 from shardfold.plan import Cell
 from shardfold.publish import Finding
-from shardfold.tasks import CoefficientMap, PartWritten, Workplace, WriteCoefficients
+from shardfold.tasks import CoefficientMap, Outcome, PartWritten, Refusal, Task, Workplace, WriteCoefficients
+
+Array = npt.NDArray[Any]
 
 LONGEST_SEGMENT = 8192
 SHORTEST_SEGMENT = 64
@@ -77,14 +81,15 @@ def write_parts(
     workplace: Workplace,
     executor: Executor,
     listen: Listener,
-) -> tuple[list[PartWritten], int]:
+) -> tuple[list[tuple[str, str]], Spectrum]:
     """Have the coefficients written, one part per leaf that has samples, and return the parts in order of time.
 
     Returns
     -------
-    parts : list of PartWritten
-    segment : int
-        Samples per segment of the spectra; 0 where there are too few.
+    parts : list of (key, digest)
+        In order of time.
+    spectrum : Spectrum
+        Of all coefficients.
     """
     segment = _segment(rows_of) if workplace.design.timed else 0
     mapping = coefficient_map(finding, shape)
@@ -104,13 +109,54 @@ def write_parts(
     again = sum(cell.stored_bytes for cell in cells) if shape.identity else 0
     listen(StageStarted("coefficients", len(tasks), again))
     parts = []
-    for _, outcome in executor.perform(workplace, tasks):
-        if not isinstance(outcome, PartWritten):
-            raise getattr(outcome, "error", RuntimeError("a coefficient task must write a part"))
-        parts.append(outcome)
-        listen(TaskDone("coefficients", outcome.bytes_read))
+    spectrum = Spectrum(finding.rank, segment)
+    for outcome in _in_order(executor.perform(workplace, tasks), tasks, listen):
+        parts.append((outcome.key, outcome.digest))
+        spectrum.add(outcome)
     listen(StageDone("coefficients"))
-    return sorted(parts, key=lambda part: part.key), segment
+    return parts, spectrum
+
+
+def _in_order(
+    outcomes: Iterator[tuple[Task, Outcome]], tasks: Sequence[WriteCoefficients], listen: Listener
+) -> Iterator[PartWritten]:
+    """Yield the parts in the order of their tasks; only those that came too early are held."""
+    early: dict[str, PartWritten] = {}
+    due = iter(tasks)
+    task = next(due, None)
+    for _, outcome in outcomes:
+        if isinstance(outcome, Refusal):
+            raise outcome.error
+        assert isinstance(outcome, PartWritten)
+        listen(TaskDone("coefficients", outcome.bytes_read))
+        early[outcome.key] = outcome
+        while task is not None and task.key in early:
+            yield early.pop(task.key)
+            task = next(due, None)
+
+
+class Spectrum:
+    """The power of all coefficients, added up part by part in order of time, so that its bits are always the same."""
+
+    def __init__(self, rank: int, segment: int) -> None:
+        self._power = np.zeros((rank, segment // 2 + 1))
+        self._rank, self._segments = rank, 0
+        self._least, self._most = np.iinfo(np.int64).max, 0
+
+    def add(self, part: PartWritten) -> None:
+        """Add one part."""
+        if part.segments:
+            self._power += part.power
+            self._segments += part.segments
+        if part.steps[1] > 0:
+            self._least, self._most = min(self._least, part.steps[0]), max(self._most, part.steps[1])
+
+    def dominant_hz(self) -> Array:
+        """Return the peak frequency of each coefficient (rank,), NaN where sampling is uneven or too short."""
+        even = self._least > 0 and self._most - self._least <= EVEN_STEP_TOLERANCE * self._least
+        if not (even and self._segments):
+            return np.full(self._rank, np.nan)
+        return dominant_frequency(self._power, (self._least + self._most) / 2 * 1e-9)
 
 
 def coefficient_map(finding: Finding, shape: Shape) -> CoefficientMap:
@@ -121,29 +167,13 @@ def coefficient_map(finding: Finding, shape: Shape) -> CoefficientMap:
     return CoefficientMap(rows, np.zeros_like(mean) if finding.keep_mean else mean)
 
 
-def dominant_hz(parts: Sequence[PartWritten], rank: int, segment: int) -> np.ndarray:
-    """Return the peak frequency of each coefficient, NaN where sampling is uneven or too short.
-
-    The spectra of the parts are summed in order of time, so the figure does not depend on who finished first.
-    """
-    blank = np.full(rank, np.nan)
-    steps = [part.steps for part in parts if part.steps[1] > 0]
-    if not segment or not steps or not any(part.segments for part in parts):
-        return blank
-    low, high = min(a for a, _ in steps), max(b for _, b in steps)
-    if low <= 0 or high - low > EVEN_STEP_TOLERANCE * low:
-        return blank
-    power = np.sum([part.power for part in parts if part.segments], axis=0)
-    return dominant_frequency(power, (low + high) / 2 * 1e-9)
-
-
 def _segment(rows_of: dict[int, int]) -> int:
     longest = max(rows_of.values(), default=0)
     segment = min(LONGEST_SEGMENT, 1 << max(0, longest.bit_length() - 1))
     return segment if segment >= SHORTEST_SEGMENT else 0
 
 
-def _factor(dossier: Dossier) -> np.ndarray:
+def _factor(dossier: Dossier) -> Array:
     table = dossier.table
     return Preparation.build(table.gain, table.shift, table.scale, table.weight).factor
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import time
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -11,11 +12,12 @@ import numpy as np
 from shardfold import budget, dossier, layout
 from shardfold.blas import core_type, one_thread
 from shardfold.events import Listener
+from shardfold.gather import moment
 from shardfold.job import Job
 from shardfold.kernels import cost
-from shardfold.kernels.whole import Shape
+from shardfold.kernels.whole import Shape, stored_dtype
 from shardfold.plan import Cell, bytes_to_read, cut, tree
-from shardfold.run import reads_of
+from shardfold.run import reads_of, shapes_of
 from shardfold.site import Site, look
 from shardfold.sums import leaf_names
 
@@ -53,21 +55,27 @@ def forecast(job: Job, workers: int, listen: Listener) -> Forecast:
     stored = _stored(site) if site.exists else set()
     reads = reads_of(job, design)
     serial = job.engine.workers == "serial"
-    memory = budget.budget(design, shape, cells, job.modes.rank, 1 if serial else workers, serial)
+    shapes = shapes_of(design, job.modes.rank, reads)
+    memory = max(
+        (budget.budget(design, s, cells, job.modes.rank, 1 if serial else workers, serial) for s in shapes),
+        key=lambda plan: plan.worker_bytes,
+    )
+    # Where footers were sampled, amounts are scaled up to all shards; spans and memory are those of the sample.
+    scale = _scale(site)
     limit = job.engine.memory_bytes
     figures = {
         "campaign": job.campaign,
         "shards": _shards(site),
-        "samples": sum(shard.rows for shard in site.shards.values()),
+        "samples": round(scale * sum(shard.rows for shard in site.shards.values())),
         "channels": design.channels,
         "span": _span(site),
         "summary": _summary(design.identity, design.width, design.channels),
         "leaf": f"{design.leaf_ns / 1e9:g} s" if design.timed else f"{1 << design.leaf_bits} by hash of the name",
-        "cells": {"all": len(cells), "stored": sum(cell.name in stored for cell in cells)},
-        "reads": _reads(cells, stored, reads, design.identity),
-        "work": _work(shape, cells, stored, reads, workers),
+        "cells": {"all": round(scale * len(cells)), "stored": sum(cell.name in stored for cell in cells)},
+        "reads": _reads(cells, stored, reads, design.identity, scale),
+        "work": _work(shapes, cells, stored, workers, scale),
         "memory": _memory(memory, limit),
-        "storage_bytes": _storage(shape, cells, reads, design.kernel),
+        "storage_bytes": round(scale * _storage(shapes, cells, design.kernel)),
         "dossier": "exists" if site.exists else "would be created",
         "blas": core_type(),
     }
@@ -98,7 +106,7 @@ def _span(site: Site) -> list[str] | None:
     lasts = [shard.last for shard in site.shards.values() if shard.last is not None]
     if not firsts:
         return None
-    return [f"{np.datetime64(value, 'ns')}Z" for value in (min(firsts), max(lasts))]
+    return [moment(min(firsts)), moment(max(lasts))]
 
 
 def _summary(identity: bool, width: int, channels: int) -> str:
@@ -107,21 +115,31 @@ def _summary(identity: bool, width: int, channels: int) -> str:
     return f"whole, probe of {width} rows: every shard holds all channels of its samples"
 
 
-def _reads(cells: tuple[Cell, ...], stored: set[str], reads: int, identity: bool) -> dict[str, Any]:
-    once = sum(cell.stored_bytes for cell in cells)
+def _scale(site: Site) -> float:
+    inventory = site.inventory
+    described = len(inventory.shards) + len(inventory.refused)
+    return (inventory.listed - len(inventory.unsettled)) / described if inventory.sampled else 1.0
+
+
+def _reads(
+    cells: Sequence[Cell], stored: set[str], reads: int, identity: bool, scale: float
+) -> dict[str, Any]:
+    once = scale * sum(cell.stored_bytes for cell in cells)
     return {
         "passes": reads,
-        "bytes_first": bytes_to_read(cells, stored),
-        "bytes_further": once * (reads - 1),
-        "bytes_for_coefficients": once if identity else 0,
+        "bytes_first": round(scale * bytes_to_read(cells, stored)),
+        "bytes_further": round(once * (reads - 1)),
+        "bytes_for_coefficients": round(once) if identity else 0,
     }
 
 
-def _work(shape: Shape, cells: tuple[Cell, ...], stored: set[str], reads: int, workers: int) -> dict[str, Any]:
-    rows = sum(cell.rows for cell in cells if cell.name not in stored)
-    flops = cost.fold_flops(shape, rows) * reads
-    data = sum(cell.stored_bytes for cell in cells if cell.name not in stored) * reads
-    seconds = (flops / _flops_per_second() + data / ASSUMED_BYTES_PER_SECOND) / workers
+def _work(
+    shapes: Sequence[Shape], cells: Sequence[Cell], stored: set[str], workers: int, scale: float
+) -> dict[str, Any]:
+    fresh = [cell for cell in cells if cell.name not in stored]
+    rows, data = sum(cell.rows for cell in fresh), sum(cell.stored_bytes for cell in fresh)
+    flops = scale * sum(cost.fold_flops(shape, rows) for shape in shapes)
+    seconds = (flops / _flops_per_second() + scale * data * len(shapes) / ASSUMED_BYTES_PER_SECOND) / workers
     return {
         "flops": flops,
         "workers": workers,
@@ -141,19 +159,23 @@ def _memory(memory: budget.Budget, limit: int) -> dict[str, Any]:
     }
 
 
-def _storage(shape: Shape, cells: tuple[Cell, ...], reads: int, kernel: int) -> int:
+def _storage(shapes: Sequence[Shape], cells: Sequence[Cell], kernel: int) -> int:
     sums = sum(len(nodes) for nodes in tree(1, leaf_names(cells), kernel)) if cells else 0
-    x_bytes = 0 if shape.identity else sum(cell.rows * shape.k * min(8, cell.dtype.itemsize) for cell in cells)
-    return reads * ((len(cells) + sums) * cost.summary_bytes(shape) + x_bytes)
+    total = 0
+    for shape in shapes:
+        per_sample = 0 if shape.identity else shape.k
+        x_bytes = sum(cell.rows * per_sample * stored_dtype(cell.dtype).itemsize for cell in cells)
+        total += (len(cells) + sums) * cost.summary_bytes(shape) + x_bytes
+    return total
 
 
 def _flops_per_second() -> float:
     """Measure one float64 product of about 20 milliseconds."""
-    rng_free = np.ones((512, 2048)), np.ones((2048, 96))
+    left, right = np.ones((512, 2048)), np.ones((2048, 96))
     with one_thread():
         begin = time.perf_counter()
         for _ in range(3):
-            rng_free[0] @ rng_free[1]
+            left @ right
         return 3 * 2.0 * 512 * 2048 * 96 / (time.perf_counter() - begin)
 
 

@@ -72,15 +72,20 @@ def load_job(path: Path, overrides: Sequence[str] = (), endpoint: str | None = N
     JobInvalid
         With all faults, in the order of the lines.
     """
+    fault = ""
     try:
-        text = path.read_bytes().decode("utf-8-sig")
+        data = path.read_bytes()
     except OSError as error:
-        why, remedy = f"the job file cannot be read: {(error.strerror or str(error)).lower()}", "check the path"
-    except UnicodeDecodeError as error:
-        why, remedy = f"the job file must be UTF-8 text; byte {error.start + 1} is not", "save it as UTF-8"
+        fault = f"{path}: the job file cannot be read: {(error.strerror or str(error)).lower()}; check the path"
     else:
-        return parse_job(text, str(path), overrides, endpoint=endpoint, path=path.resolve())
-    raise JobInvalid("the job has 1 fault", where=str(path), faults=(f"{path}: {why}; {remedy}",))
+        try:
+            text = data.decode("utf-8-sig")
+        except UnicodeDecodeError as error:
+            line = data.count(b"\n", 0, error.start) + 1
+            fault = f"{path}:{line}: must be UTF-8 text; byte {error.start + 1} of the file is not; save it as UTF-8"
+    if fault:
+        raise JobInvalid("the job has 1 fault", where=str(path), faults=(fault,))
+    return parse_job(text, str(path), overrides, endpoint=endpoint, path=path.resolve())
 
 
 def parse_job(

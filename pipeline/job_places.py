@@ -51,15 +51,16 @@ def resolve(written: str, folder: Path) -> str:
     if "*" in text:
         raise RuleBroken("must be a folder, not a pattern", "patterns belong into source.match")
     if slip := _SLIP.match(text):
-        fixed = f"{slip[1].lower()}://{text[slip.end() :]}"
+        path = text[slip.end() :]
+        fixed = f"/{path}" if slip[1].lower() == "file" else f"{slip[1].lower()}://{path}"
         raise RuleBroken("must have two slashes after the colon of a URL", f'write "{fixed}"')
     return _resolved_url(text) if is_url(text) else _resolved_path(text, folder)
 
 
 def inside(inner: str, outer: str) -> str | None:
     """Return the key of one location within another ("" if they are the same), ``None`` if it is not inside."""
-    below, above = inner.rstrip("/") + "/", outer.rstrip("/") + "/"
-    return below[len(above) :].strip("/") if below.startswith(above) else None
+    below, above = _steps(inner), _steps(outer)
+    return "/".join(below[len(above) :]) if below[: len(above)] == above else None
 
 
 def pattern_regex(pattern: str) -> re.Pattern[str]:
@@ -68,6 +69,11 @@ def pattern_regex(pattern: str) -> re.Pattern[str]:
     ``**/`` is any depth of folders, none included; ``*``, ``?``, ``[abc]`` and ``[!abc]`` stay within a folder.
     """
     return re.compile("".join(_regex_part(part) for part in _PART.findall(pattern)), re.DOTALL)
+
+
+def _steps(location: str) -> list[str]:
+    scheme, colon, path = location.rpartition("://")
+    return [scheme + colon, *(step for step in path.split("/") if step)]
 
 
 def _regex_part(part: str) -> str:
@@ -111,10 +117,8 @@ def parse_endpoint(value: object) -> str:
     rule = "must be the address of an S3 service: http:// or https://, a host, perhaps a port"
     text = value.strip() if isinstance(value, str) else ""
     if not re.match(r"https?://", text, re.IGNORECASE):
-        example = (
-            f'write "http://{text}"' if re.fullmatch(r"[\w.-]+(:\d+)?", text) else 'such as "http://127.0.0.1:9000"'
-        )
-        raise RuleBroken(rule, example)
+        bare = re.fullmatch(r"[\w.-]+(:\d+)?", text) is not None
+        raise RuleBroken(rule, f'write "http://{text}"' if bare else 'such as "http://127.0.0.1:9000"')
     try:
         parts = urlsplit(text)
         port = f":{parts.port}" if parts.port is not None else ""

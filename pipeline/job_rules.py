@@ -55,14 +55,14 @@ class Written:
         written = self.value(key)
         return resolve(written, self.folder) if isinstance(written, str) else None
 
-    def fault(self, key: str, rule: str, remedy: str = "", *, show: bool = True) -> Fault:
+    def fault(self, key: str, rule: str, remedy: str = "") -> Fault:
         """Return a fault on a key, or on the section it is missing from."""
         path, entry = tuple(key.split(".")), None
         for length in range(len(path), -1, -1):
             entry = self.root.at(path[:length])
             if entry is not None:
                 break
-        shown = entry.shown() if entry is not None and show and self.given(key) else ""
+        shown = entry.shown() if entry is not None and self.given(key) else ""
         return Fault((entry or self.root).spot, key, rule, shown, remedy)
 
 
@@ -132,7 +132,7 @@ def _keys_of_location(written: Written) -> Iterator[Fault]:
         location = written.location(f"{section}.location")
         if location is None:
             continue
-        if not location.startswith("s3://"):
+        if not any(place.startswith("s3://") for place in _places_of(written, section)):
             for key in (f"{section}.storage.{name}" for name in _STORAGE_KEYS):
                 if written.entry(key) is not None:
                     rule = f"has no meaning: {section}.location is not on S3"
@@ -142,12 +142,18 @@ def _keys_of_location(written: Written) -> Iterator[Fault]:
             yield written.fault(f"{section}.shared", rule, "leave it out")
 
 
+def _places_of(written: Written, section: str) -> list[str]:
+    """Return the locations that are reached through a section's storage; the channel table may be elsewhere."""
+    places = [written.location(f"{section}.location"), written.location(f"{section}.channels.table")]
+    return [place for place in places if place is not None]
+
+
 def _dossier_can_be_written(written: Written) -> Iterator[Fault]:
     location = written.location("dossier.location")
     if location is not None and not is_local(location) and not location.startswith("s3://"):
         rule = "must be on S3 or a local path: other stores cannot create an object only if it is absent"
         yield written.fault("dossier.location", rule, "write s3://bucket/folder/ or a path")
-    if written.value("dossier.storage.anonymous") is True:
+    elif location is not None and written.value("dossier.storage.anonymous") is True and not is_local(location):
         yield written.fault("dossier.storage.anonymous", "must be false: a dossier is written", "leave it out")
 
 

@@ -27,7 +27,9 @@ from shardfold.job_values import (
     SEED,
     WIDTH,
     WORKERS,
+    always_true,
     auto_or_duration,
+    core_type,
     different_terms,
     keys_pattern,
     one_line,
@@ -130,7 +132,7 @@ class Place(Settings):
 class Background(Settings):
     """Known functions of time that are kept beside the sums, so that they can be removed after the fact."""
 
-    mean: Literal[True] = True
+    mean: Annotated[bool, BeforeValidator(always_true)] = True
 
 
 class Design(Settings):
@@ -142,7 +144,7 @@ class Design(Settings):
     summary: Literal["auto", "whole"] = "auto"
     width: Annotated[Literal["auto"] | int, BeforeValidator(WIDTH)] = "auto"
     leaf: Annotated[Literal["auto"] | int, BeforeValidator(auto_or_duration)] = "auto"
-    blas: Word = "any"
+    blas: Annotated[str, AfterValidator(core_type)] = "any"
     seed: Annotated[int, BeforeValidator(SEED)] = 20310301
     mixed_units: bool = False
 

@@ -10,6 +10,7 @@ from collections.abc import Callable
 from typing import Any
 
 from shardfold.job_faults import one_of
+from shardfold.job_places import pattern_regex
 from shardfold.quantities import RuleBroken, parse_bytes, parse_duration
 
 LEAST_MEMORY_BYTES = 256 * 2**20
@@ -18,6 +19,11 @@ MOST_WORKERS = 100_000
 MOST_READS = 5
 LARGEST = 2**63 - 1
 TIME_GROUPS = ("time", "seconds", "milliseconds", "microseconds", "nanoseconds")
+CORE_TYPES = (
+    "any", "Prescott", "Core2", "Penryn", "Dunnington", "Nehalem", "Sandybridge", "Haswell", "SkylakeX", "Cooperlake",
+    "SapphireRapids", "Barcelona", "Bulldozer", "Piledriver", "Steamroller", "Excavator", "Zen", "armv8",
+    "neoversen1", "neoversev1", "neoversen2", "cortexa57", "thunderx2t99",
+)  # fmt: skip
 
 _TIME_RULE = (
     "must be the name of the time column, {from_name: REGEX, step: DURATION}, {start: TIME, step: DURATION} or none"
@@ -42,6 +48,10 @@ def keys_pattern(text: str) -> str:
         raise RuleBroken("must be a pattern of what lies below the location, without the location itself", remedy)
     if re.search(r"\{[^}]*,[^}]*\}", text):
         raise RuleBroken("must be a pattern of *, **, ? and [abc]; {a,b} is not one of them", "use * or [abc]")
+    try:
+        pattern_regex(text)
+    except re.error as error:
+        raise RuleBroken(f"must be a pattern that can be matched ({error})") from None
     return text
 
 
@@ -119,6 +129,14 @@ def whole_number(least: int, most: int, words: tuple[str, ...] = ()) -> Callable
     return check
 
 
+def always_true(value: object) -> bool:
+    """Return true: the mean is kept beside the sums in any case."""
+    if value is not True:
+        rule = "must be true: the mean is kept in any case, so that it can be removed or not after the fact"
+        raise RuleBroken(rule, "write modes.remove: [] to leave it in the modes")
+    return True
+
+
 def ray_address(text: str) -> str:
     """Return the address of a running Ray."""
     if text.startswith("ray://"):
@@ -126,6 +144,15 @@ def ray_address(text: str) -> str:
         raise RuleBroken(rule, "start the run on the cluster as a Ray job, with address: auto")
     if not re.fullmatch(r"auto|local|[\w.-]+:\d{1,5}|\[[0-9a-fA-F:]+\]:\d{1,5}", text):
         raise RuleBroken("must be HOST:PORT or auto", "leave it out to use RAY_ADDRESS, or a Ray of its own")
+    return text
+
+
+def core_type(text: str) -> str:
+    """Return ``any`` or the name of an OpenBLAS core type; names that are new to this list are taken as they are."""
+    known = next((core for core in CORE_TYPES if core.lower() == text.lower()), "")
+    if not re.fullmatch(r"\w+", text) or text in ("auto", "none", "all") or known not in ("", text):
+        remedy = f"write {known}" if known else "write any if it does not matter"
+        raise RuleBroken("must be any or an OpenBLAS core type such as Haswell, SkylakeX or Zen", remedy)
     return text
 
 

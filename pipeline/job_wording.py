@@ -61,7 +61,7 @@ def _deepest(root: Entry, location: Iterable[str | int]) -> Entry:
 
 def _standard(kind: str, location: Sequence[str | int], entry: Entry, key: Key) -> tuple[str, str]:
     """Return rule and remedy of a value of the wrong type, or that is none of the listed words."""
-    label = f"{location[-1]}: " if location and isinstance(location[-1], str) else ""
+    label = _label(location, entry)
     if kind == "literal_error":
         near = nearest(entry.written, key.words)
         return f"must be {one_of(key.words)}", f"did you mean {near}?" if near else ""
@@ -77,8 +77,15 @@ def _standard(kind: str, location: Sequence[str | int], entry: Entry, key: Key) 
     return f"is not valid here ({kind})", ""
 
 
+def _label(location: Sequence[str | int], entry: Entry) -> str:
+    """Return what stands before a value where it is written: nothing for an item of a list."""
+    if not location or isinstance(location[-1], int):
+        return ""
+    return f"{'.'.join(map(str, location))}=" if entry.spot.argument else f"{location[-1]}: "
+
+
 def _quoted(label: str, entry: Entry) -> str:
     if not entry.written:
-        return ""
+        return "put it in quotes if the brackets belong to it" if entry.items or entry.keys else ""
     reason = f"YAML reads {entry.written} as {str(entry.value).lower()}: " if isinstance(entry.value, bool) else ""
     return f'{reason}write {label}"{entry.written}"'

@@ -11,7 +11,7 @@ from collections.abc import Sequence
 from shardfold.job_faults import NOT_SHOWN, Fault, Spot, holds_secret, looks_secret
 from shardfold.yaml_lines import Document, Entry, read_document
 
-MOST_CHARACTERS = 1_000_000
+MOST_CHARACTERS = 200_000
 
 _NEEDED_SECTIONS = ("source", "dossier")
 _KEY = re.compile(r"[A-Za-z_][\w-]*(\.[A-Za-z_][\w-]*)*")
@@ -100,7 +100,8 @@ def _lay_over(root: Entry, override: str, spot: Spot) -> list[Fault]:
 def _read_value(value: str, spot: Spot) -> Document:
     """Return the value of an override; what YAML would take as a sign or a comment is text on a command line."""
     text = value.strip()
-    if text.startswith(tuple("*&!%@`|>#")):
+    pattern = text[:1] in ("[", "{") and text[-1:] not in ("]", "}")
+    if pattern or text.startswith(tuple("*&!%@`|>#")):
         return Document(Entry(text, spot, written=text))
     document = read_document(text, spot)
     root = document.root

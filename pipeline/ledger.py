@@ -1,7 +1,7 @@
 """The ledger: numbered commits, each a small change, of which shards are in and which cells hold them.
 
 A commit is one conditional create, so two writers cannot both have a number. It ends in one of three ways: landed,
-refused (another writer took the number), or unknown (the answer was lost; the token in the body, read back, settles it).
+refused (another writer took the number), or unknown (the answer was lost; the token in the body, read back, tells).
 State is the replay of all commits. Withdrawal, corrections and checkpoints have room as further fields of a delta;
 a reader refuses a format newer than its own.
 """

@@ -165,6 +165,8 @@ class Seaweed:
             f"-filer.port={filer}",
             "-s3",
             f"-s3.port={s3}",
+            "-s3.port.iceberg=0",
+            "-s3.port.lance=0",
             f"-s3.config={folder}/s3.json",
             "-volume.max=0",
             "-master.volumeSizeLimitMB=1024",

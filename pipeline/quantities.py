@@ -1,6 +1,6 @@
 """Durations, sizes in bytes and instants, read from text into exact integers and written back.
 
-Decimal arithmetic only: a value that is not a whole number of nanoseconds or bytes is refused, never rounded. Nothing
+Fractions only: a value that is not a whole number of nanoseconds or bytes is refused, never rounded. Nothing
 here knows about files, keys or settings; a broken rule says what was wanted and what to write instead.
 """
 
@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import re
 from datetime import UTC, datetime, timedelta
-from decimal import Decimal
+from fractions import Fraction
 from typing import Any
 
 DURATION_UNITS = {
@@ -37,7 +37,7 @@ _BYTE_OTHER_NAMES = {
     "gib": "GiB", "tib": "TiB", "kiB": "KiB",
 }  # fmt: skip
 
-_QUANTITY = re.compile(r"([0-9]+(?:\.[0-9]+)?|\.[0-9]+)[ \t]*([^\W\d_]*)")
+_QUANTITY = re.compile(r"([0-9]{1,30}(?:\.[0-9]{1,30})?|\.[0-9]{1,30})[ \t]*([^\W\d_]*)")
 _INSTANT = re.compile(
     r"(\d{4}-\d{2}-\d{2})(?:(?:[Tt]|[ \t]+)(\d{2}:\d{2}(?::\d{2})?)(?:\.(\d{1,9}))?[ \t]*([Zz]|[+-]\d{2}:?\d{2})?)?"
 )
@@ -74,7 +74,7 @@ def parse_duration(value: object) -> int:
     if unit.lower() in ("hz", "khz"):
         raise RuleBroken(wanted, _step_of_rate(number, unit))
     factor = _factor(number, unit, DURATION_UNITS, _DURATION_OTHER_NAMES, wanted)
-    return _whole(number * factor, "nanoseconds", DURATION_UNITS)
+    return _whole(Fraction(number) * factor, "nanoseconds", DURATION_UNITS)
 
 
 def parse_bytes(value: object) -> int:
@@ -93,7 +93,8 @@ def parse_bytes(value: object) -> int:
     wanted = 'must be a size: a number and a unit (B, kB, MB, GB, TB, KiB, MiB, GiB or TiB), such as "2 GiB"'
     _refuse_bare_number(value, wanted, ("MiB", "GiB"))
     number, unit = _split(value, wanted)
-    return _whole(number * _factor(number, unit, BYTE_UNITS, _BYTE_OTHER_NAMES, wanted), "bytes", BYTE_UNITS)
+    factor = _factor(number, unit, BYTE_UNITS, _BYTE_OTHER_NAMES, wanted)
+    return _whole(Fraction(number) * factor, "bytes", BYTE_UNITS)
 
 
 def parse_instant(value: object) -> int:
@@ -141,15 +142,15 @@ def _refuse_bare_number(value: object, wanted: str, units: tuple[str, str]) -> N
         raise RuleBroken(wanted, f'the unit is missing: write "{text} {units[0]}" or "{text} {units[1]}"')
 
 
-def _split(value: object, wanted: str) -> tuple[Decimal, str]:
+def _split(value: object, wanted: str) -> tuple[str, str]:
     text = value.strip() if isinstance(value, str) else ""
     found = _QUANTITY.fullmatch(text)
     if found is None:
         raise RuleBroken(wanted, "it cannot be negative" if text.startswith("-") else "")
-    return Decimal(found[1]), found[2]
+    return found[1], found[2]
 
 
-def _factor(number: Decimal, unit: str, units: dict[str, int], other_names: dict[str, str], wanted: str) -> int:
+def _factor(number: str, unit: str, units: dict[str, int], other_names: dict[str, str], wanted: str) -> int:
     if unit in units:
         return units[unit]
     meant = other_names.get(unit) or other_names.get(unit.lower()) or ""
@@ -157,20 +158,21 @@ def _factor(number: Decimal, unit: str, units: dict[str, int], other_names: dict
     raise RuleBroken(wanted, f'write "{number} {meant}"' if meant else f"{unit} is not one of the units")
 
 
-def _whole(amount: Decimal, plural: str, units: dict[str, int]) -> int:
-    if amount != amount.to_integral_value():
-        nearest = _format(int(amount.to_integral_value()), units)
+def _whole(amount: Fraction, plural: str, units: dict[str, int]) -> int:
+    if amount.denominator != 1:
+        nearest = _format(round(amount), units)
         raise RuleBroken(f"must be a whole number of {plural}", f'the nearest is "{nearest}"')
     if amount > _LARGEST:
         raise RuleBroken(f"must be at most 2**63 - 1 {plural}")
     return int(amount)
 
 
-def _step_of_rate(number: Decimal, unit: str) -> str:
-    rate = number * (1000 if unit.lower() == "khz" else 1)
-    if not rate or (Decimal(10**9) / rate) % 1:
+def _step_of_rate(number: str, unit: str) -> str:
+    rate = Fraction(number) * (1000 if unit.lower() == "khz" else 1)
+    step_ns = 10**9 / rate if rate else Fraction(0)
+    if not step_ns or step_ns.denominator != 1:
         return "give the step from one sample to the next instead of the rate"
-    return f'give the step instead of the rate: "{format_duration(int(Decimal(10**9) / rate))}"'
+    return f'give the step instead of the rate: "{format_duration(int(step_ns))}"'
 
 
 def _offset(zone: str | None) -> str:

@@ -21,11 +21,12 @@ from shardfold.design import Design
 from shardfold.errors import InputError, RecordCorrupt
 from shardfold.events import Listener, Noted, Published
 from shardfold.executor import Executor
-from shardfold.finish import dominant_hz, finding_of, too_few_samples, write_parts, write_probe
+from shardfold.finish import finding_of, too_few_samples, write_parts, write_probe
 from shardfold.gather import moment
 from shardfold.ids import digest_value
 from shardfold.ingest import Intake, bring_in
 from shardfold.job import Job
+from shardfold.kernels.factors import probe_width
 from shardfold.kernels.whole import Shape, Summary
 from shardfold.plan import Cell
 from shardfold.publish import manifest, put_all, quality, result_tables, seal, shards_digest
@@ -87,6 +88,7 @@ def run(job: Job, make_executor: Callable[[], Executor], listen: Listener) -> Re
         reads = reads_of(job, site.dossier.design)
         if reads < job.modes.reads:
             listen(Noted("the probe is the identity and exact: one read is enough"))
+        _refuse_too_large(site, intake, reads)
         probes: list[str] = []
         for read in range(1, reads + 1):
             shape, digest = plan_read(site, intake, read)
@@ -149,7 +151,7 @@ def reads_of(job: Job, design: Design) -> int:
 
 
 def plan_read(site: Site, intake: Intake, read: int) -> tuple[Shape, str]:
-    """Return shape and probe digest of a read whose probe is frozen, after refusing what is too large."""
+    """Return shape and probe digest of a read whose probe is frozen."""
     facts = dossier.probe_facts(site.dossier.store, site.dossier.design, read)
     if facts is None:
         raise RecordCorrupt(
@@ -158,12 +160,24 @@ def plan_read(site: Site, intake: Intake, read: int) -> tuple[Shape, str]:
             rule="a dossier keeps the probe of every read",
             remedy="restore the object from a copy",
         )
-    shape, digest = site.dossier.design.shape(read, facts[0]), facts[1]
-    cells = intake.cells(read, shape, digest)
-    engine = site.job.engine
-    plan = budget.budget(site.dossier.design, shape, cells, site.job.modes.rank, 1, engine.workers == "serial")
-    budget.check(plan, engine.memory_bytes, cells)
-    return shape, digest
+    return site.dossier.design.shape(read, facts[0]), facts[1]
+
+
+def shapes_of(design: Design, rank: int, reads: int) -> list[Shape]:
+    """Return the shapes of all reads, known before the first: each further probe is wider by its random rows."""
+    widths = [design.width]
+    for _ in range(1, reads):
+        widths.append(probe_width(widths[-1], rank))
+    return [design.shape(read, width) for read, width in enumerate(widths, 1)]
+
+
+def _refuse_too_large(site: Site, intake: Intake, reads: int) -> None:
+    """Refuse before the first read what any of the reads would need too much memory for."""
+    design, engine, rank = site.dossier.design, site.job.engine, site.job.modes.rank
+    for read, shape in enumerate(shapes_of(design, rank, reads), 1):
+        cells = intake.cells(read, shape, "")
+        plan = budget.budget(design, shape, cells, rank, 1, engine.workers == "serial")
+        budget.check(plan, engine.memory_bytes, cells)
 
 
 def _check_rank(site: Site) -> None:
@@ -214,11 +228,11 @@ def _publish(
         site.dossier, summary, site.job.modes.rank, "mean" not in site.job.modes.remove, intake.listen
     )
     rows_of = intake.rows_of(len(probes))
-    parts, segment = write_parts(
+    parts, spectrum = write_parts(
         finding, shape, cells, rows_of, prefix, site.workplace, intake.executor, intake.listen
     )
-    digests = put_all(store, prefix, result_tables(finding, dominant_hz(parts, finding.rank, segment)))
-    digests |= {part.key.removeprefix(prefix): part.digest for part in parts}
+    digests = put_all(store, prefix, result_tables(finding, spectrum.dominant_hz()))
+    digests |= {key.removeprefix(prefix): digest for key, digest in parts}
     facts |= {
         "id": result_id,
         "ledger_number": intake.ledger.number,

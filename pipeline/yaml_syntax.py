@@ -54,7 +54,7 @@ def _meaning(lines: list[str], complaint: Complaint) -> tuple[tuple[int, int], s
 
 
 def _unquoted(lines: list[str], at: tuple[int, int]) -> tuple[tuple[int, int], str, str]:
-    """Return the meaning of a value that starts with a sign, or of a pattern such as [0-9]*.parquet taken for a list."""
+    """Return the meaning of a value that starts with a sign, or of a pattern ([0-9]*.npy) taken for a list."""
     line = lines[at[0]] if at[0] < len(lines) else ""
     column = _start_of_pattern(line, at[1])
     before, value = line[:column], line[column:]
@@ -77,20 +77,17 @@ def _in_quotes(value: str, key: str, keys: list[str]) -> str:
     return f'write {key}: "{value}"' if key else f'write "{value}"'
 
 
+_INNER = "and put values that hold , [ ] { } or # in quotes"
+# Words of the parser, whether the mistake is where the construct began, the rule, the remedy; the first match counts.
 _MEANINGS = (
-    (
-        "unknown escape character",
-        False,
-        "a backslash inside double quotes is an escape in YAML",
-        "put the value in single quotes instead",
-    ),
+    ("unknown escape", False, "a backslash inside double quotes is an escape in YAML", "use single quotes instead"),
     ("scanning a (double-)?quoted scalar", True, "the quote that opens here is not closed", "close it"),
     ("single document", False, "a second document starts here; a job is one document", "remove the line ---"),
     ("document start", False, "text follows after the end of the document", "remove the line ... above"),
-    ("sequence entries are not allowed", False, "a list must start on a line of its own", "write [a, b] on this line"),
+    ("sequence entries are not", False, "a list must start on a line of its own", "write [a, b] on this line"),
     ("scanning a directive", False, "a line that starts with % needs quotes", "put the text in quotes"),
-    ("flow sequence.*expected", True, "the list that opens with [ here is not closed", "close it with ], and put values that hold , [ ] { } or # in quotes"),
-    ("flow mapping.*expected", True, "the mapping that opens with { here is not closed", "close it with }, and put values that hold , [ ] { } or # in quotes"),
+    ("flow sequence.*expected", True, "the list that opens with [ here is not closed", f"close it with ], {_INNER}"),
+    ("flow mapping.*expected", True, "the mapping that opens with { here is not closed", f"close it with }}, {_INNER}"),
     ("a tag|tag handle", False, "a value that starts with ! needs quotes", "put the value in quotes"),
 )
 

@@ -8,7 +8,7 @@ shards made of the same block.
 from __future__ import annotations
 
 import io
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 
@@ -97,7 +97,7 @@ def _blocks(campaign: Campaign) -> Iterator[np.ndarray]:
         yield (np.round(values * 256) / 256).astype(campaign.dtype)
 
 
-def _parquet(campaign: Campaign, times: np.ndarray, blocks: list[np.ndarray]) -> tuple[str, pa.Buffer]:
+def _parquet(campaign: Campaign, times: np.ndarray, blocks: list[np.ndarray]) -> tuple[str, memoryview]:
     tables = _wide if campaign.layout == "wide" else _vector
     sink = pa.BufferOutputStream()
     groups = tables(campaign, times, blocks)
@@ -120,7 +120,8 @@ def _wide(campaign: Campaign, times: np.ndarray, blocks: list[np.ndarray]) -> It
 
 def _vector(campaign: Campaign, times: np.ndarray, blocks: list[np.ndarray]) -> Iterator[pa.Table]:
     for number, block in enumerate(blocks):
-        lists = pa.FixedSizeListArray.from_arrays(pa.array(block.reshape(-1)), campaign.channels)
+        edges = np.arange(len(block) + 1, dtype=np.int32) * campaign.channels
+        lists = pa.ListArray.from_arrays(edges, pa.array(block.reshape(-1)))
         yield pa.table([_times(campaign, times, number), lists], names=["t", "v"])
 
 
@@ -135,5 +136,3 @@ def _npy(campaign: Campaign, times: np.ndarray, blocks: list[np.ndarray]) -> tup
     np.save(sink, values if campaign.orient == "samples_by_channels" else np.ascontiguousarray(values.T))
     return f"at-{times[0]}.npy", sink.getbuffer()
 
-
-Maker = Callable[[Campaign, np.ndarray, list[np.ndarray]], tuple[str, pa.Buffer]]

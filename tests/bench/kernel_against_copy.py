@@ -13,10 +13,11 @@ from collections.abc import Callable
 from functools import partial
 
 import numpy as np
+from threadpoolctl import threadpool_limits
+
 from shardfold.kernels import addressed, cost
 from shardfold.kernels.blocks import Preparation
 from shardfold.kernels.whole import Probe, Shape, fold_block, stored_dtype, zero
-from threadpoolctl import threadpool_limits
 
 
 def timed(work: Callable[[], object], repeats: int) -> list[float]:

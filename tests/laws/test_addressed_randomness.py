@@ -99,9 +99,9 @@ def test_no_cut_or_order_changes_an_entry(data: st.DataObject) -> None:
 
 @pytest.mark.parametrize("step", [1, 125_000_000, 1 << 32])
 def test_signs_of_regular_keys_are_fair_and_uncorrelated(step: int) -> None:
-    signs = addressed.signs(SEED, addressed.STREAM_PROBE, np.arange(4000) * step, 100).astype(float)
+    signs = addressed.signs(SEED, addressed.STREAM_PROBE, np.arange(1500) * step, 100).astype(float)
     assert abs(signs.mean()) < 5 / np.sqrt(signs.size)
-    for products in (signs @ signs.T / 4000, signs.T @ signs / 100):
+    for products in (signs @ signs.T / 1500, signs.T @ signs / 100):
         samples = round(signs.size / len(products))
         off = products - np.diag(np.diagonal(products))
         # The largest of N^2/2 correlations of fair signs is near sqrt(4 ln N / samples).

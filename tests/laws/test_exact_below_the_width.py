@@ -1,4 +1,4 @@
-"""A matrix of less rank than the probe has rows is decomposed as by an exact SVD, and captured energy is exact always."""
+"""A matrix of less rank than the probe has rows is decomposed as by an exact SVD; captured energy is exact always."""
 
 from __future__ import annotations
 
@@ -63,7 +63,8 @@ def test_single_precision_input(lab: Any, order: Any) -> None:
     for i in range(5):
         assert lab.angle(made.modes[:, i], truth_left[:, i]) < 1e-10
     rebuilt = made.modes[:, :5] @ folded.coefficients(made, 5)
-    assert np.linalg.norm(centred(matrix) - rebuilt) < 3e-7 * np.linalg.norm(truth)
+    # What is left is the rounding of the input, and hardly more.
+    assert np.linalg.norm(centred(matrix) - rebuilt) < 1.3 * np.linalg.norm(truth[5:])
 
 
 def test_coefficients_of_drifting_single_precision_blocks_are_orthogonal(lab: Any) -> None:
@@ -138,5 +139,5 @@ def test_an_empty_summary_and_too_high_a_rank_are_refused(lab: Any) -> None:
     block = folded.blocks[0]
     with pytest.raises(ValueError, match="rank: must be between 0 and 2; got 3"):
         factors.coefficients(made, 3, block.x, block.centre, block.centre)
-    with pytest.raises(ValueError, match="summary.n: must be at least 1; got 0"):
+    with pytest.raises(ValueError, match=r"summary\.n: must be at least 1; got 0"):
         factors.finish(zero(folded.summary.shape))

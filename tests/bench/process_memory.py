@@ -1,0 +1,109 @@
+"""Memory of a run's processes while it goes on: sampled from the kernel's own books, by phase of the run.
+
+Private bytes of a process are ``Private_Clean + Private_Dirty`` of ``/proc/PID/smaps_rollup``; the sum over a node is
+that of ``Pss``, which counts what processes share once.
+"""
+
+from __future__ import annotations
+
+import os
+import threading
+from collections import defaultdict
+from dataclasses import dataclass, field
+
+import psutil
+
+SAMPLE_SECONDS = 0.05
+LOOK_FOR_NEW_SECONDS = 0.5
+
+
+@dataclass
+class Peaks:
+    """Largest bytes seen: private ones of one worker by phase, of the driver, and shared-once sums over the node."""
+
+    worker_by_phase: dict[str, int] = field(default_factory=lambda: defaultdict(int))
+    driver: int = 0
+    object_store: int = 0
+    engine: int = 0
+    node: int = 0
+    samples: int = 0
+
+    @property
+    def worker(self) -> int:
+        """Return the largest private memory of one worker."""
+        return max(self.worker_by_phase.values(), default=0)
+
+
+class Sampler:
+    """Samples this process and what it started, but for one program, until it is left; set ``phase`` as it changes."""
+
+    def __init__(self, without: str) -> None:
+        self.peaks = Peaks()
+        self.phase = "start"
+        self._without = without
+        self._end = threading.Event()
+        self._thread = threading.Thread(target=self._sample, name="memory sampler")
+
+    def __enter__(self) -> Sampler:
+        self._thread.start()
+        return self
+
+    def __exit__(self, *error: object) -> None:
+        self._end.set()
+        self._thread.join()
+
+    def _sample(self) -> None:
+        me = psutil.Process()
+        rounds = round(LOOK_FOR_NEW_SECONDS / SAMPLE_SECONDS)
+        processes: dict[int, str] = {}
+        while not self._end.wait(SAMPLE_SECONDS):
+            if self.peaks.samples % rounds == 0:
+                processes = self._processes(me)
+            self._take(processes)
+            self.peaks.samples += 1
+
+    def _processes(self, me: psutil.Process) -> dict[int, str]:
+        found = {me.pid: "driver"}
+        for child in me.children(recursive=True):
+            try:
+                line = child.cmdline()
+            except psutil.NoSuchProcess:
+                continue
+            if line and not line[0].endswith(self._without):
+                found[child.pid] = "worker" if line[0].startswith("ray::") else "engine"
+        return found
+
+    def _take(self, processes: dict[int, str]) -> None:
+        peaks, node, engine = self.peaks, 0, 0
+        for pid, role in processes.items():
+            books = rollup(pid)
+            if not books:
+                continue
+            private = books["Private_Clean"] + books["Private_Dirty"]
+            node += books["Pss"]
+            peaks.object_store = max(peaks.object_store, books.get("Pss_Shmem", 0))
+            if role == "worker":
+                peaks.worker_by_phase[self.phase] = max(peaks.worker_by_phase[self.phase], private)
+            elif role == "driver":
+                peaks.driver = max(peaks.driver, private)
+            else:
+                engine += books["Pss"] - books.get("Pss_Shmem", 0)
+        peaks.engine = max(peaks.engine, engine)
+        peaks.node = max(peaks.node, node)
+
+
+def rollup(pid: int) -> dict[str, int]:
+    """Return the memory books of a process in bytes; empty if it is gone."""
+    try:
+        with open(f"/proc/{pid}/smaps_rollup") as lines:
+            next(lines)
+            entries = (line.split() for line in lines)
+            return {entry[0].rstrip(":"): int(entry[1]) * 1024 for entry in entries}
+    except (FileNotFoundError, ProcessLookupError, PermissionError, StopIteration):
+        return {}
+
+
+def own_private_bytes() -> int:
+    """Return the private bytes of this process now."""
+    books = rollup(os.getpid())
+    return books["Private_Clean"] + books["Private_Dirty"]
