@@ -77,10 +77,14 @@ class Preparation:
         return raw * self.gain + self.shift
 
     def prepare(self, raw: NDArray[Any]) -> Floats:
-        """Return a raw block, real (m, n), as a prepared block, float64 (m, n)."""
+        """Return a raw block, real (m, n), as a prepared block, float64 (m, n), in the same memory order."""
         require_block("raw", raw, self.gain.size)
-        column = (slice(None), np.newaxis)
-        return self.factor[column] * (raw.astype(np.float64) * self.gain[column] + self.shift[column])
+        block = raw.astype(np.float64)
+        if not self.plain:
+            block *= self.gain[:, np.newaxis]
+            block += self.shift[:, np.newaxis]
+            block *= self.factor[:, np.newaxis]
+        return block
 
 
 def find_first_bad(raw: NDArray[Any]) -> tuple[int, int, float] | None:

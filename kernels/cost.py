@@ -6,6 +6,7 @@ allocates on top of its arguments, its results included. No measurement is taken
 
 from __future__ import annotations
 
+from .factors import next_width
 from .whole import Shape, chunk_channels
 
 BLOCK_BYTES = 16 << 20
@@ -65,6 +66,18 @@ def finish_bytes(shape: Shape) -> int:
 def coefficients_bytes(rank: int, k: int, samples: int) -> int:
     """Return the peak bytes of ``factors.coefficients``: X in float64 and the result."""
     return _FLOAT * samples * (k + 2 * rank) + SMALL_BYTES
+
+
+def direct_coefficients_bytes(rank: int, m: int, samples: int) -> int:
+    """Return the peak bytes of ``factors.direct_coefficients``: the prepared block and the result."""
+    return _FLOAT * samples * (m + rank) + SMALL_BYTES
+
+
+def next_probe_bytes(shape: Shape, rank: int) -> int:
+    """Return the peak bytes of ``factors.next_probe``: the pivoted QR, then the rows and their rounded copies."""
+    decomposition = 4 * shape.m * shape.k + 2 * shape.k * shape.k
+    rows = (3 * next_width(shape.k, rank) + 1) * shape.m
+    return _FLOAT * max(decomposition, rows) + SMALL_BYTES
 
 
 def fold_flops(shape: Shape, samples: int) -> float:

@@ -259,7 +259,8 @@ def _floor(summary: Summary, keep_mean: bool) -> float:
     energy = float(summary.energy.sum())
     if keep_mean:
         energy += summary.n * mean_square
-    return float(np.sqrt(FLOOR_ULPS * EPS * energy + EPS**2 * summary.n * mean_square))
+    # The mean of equal values is off by up to 2.9 eps of them (measured, 1 to 40 channels): energy that is none.
+    return float(np.sqrt(FLOOR_ULPS * EPS * energy + (FLOOR_ULPS * EPS) ** 2 * summary.n * mean_square))
 
 
 def _finish_identity(summary: Summary) -> tuple[Floats, Floats, Floats]:

@@ -55,8 +55,19 @@ def load(store: Store) -> Dossier | None:
     return Dossier(store, design, read_table(data, layout.channels_key(1)))
 
 
-def open_dossier(job: Job, store: Store, inventory: Inventory, table: ChannelTable | None) -> Dossier:
-    """Return the dossier of a job, created if it does not exist.
+def check_design(stored: Dossier, job: Job, inventory: Inventory, table: ChannelTable | None) -> None:
+    """Check that a job asks for the design of the dossier that is there.
+
+    Raises
+    ------
+    DesignDiffers
+        If it does not; says what a new dossier would read.
+    """
+    compare(stored.design, job, channel_request(job, table), inventory.listed_bytes)
+
+
+def propose(job: Job, store: Store, inventory: Inventory, table: ChannelTable | None) -> Dossier:
+    """Return the dossier that a job would create, writing nothing.
 
     Parameters
     ----------
@@ -65,26 +76,9 @@ def open_dossier(job: Job, store: Store, inventory: Inventory, table: ChannelTab
     store : Store
         The dossier's place.
     inventory : Inventory
-        Decides ``auto`` values and channels at creation.
+        Decides ``auto`` values and channels.
     table : ChannelTable or None
         The job's channel table, read.
-
-    Raises
-    ------
-    DesignDiffers
-        If the dossier exists with another design.
-    """
-    request = channel_request(job, table)
-    stored = load(store)
-    if stored is None:
-        wanted = propose(job, store, inventory, table)
-        stored = create(wanted)
-    compare(stored.design, job, request, inventory.listed_bytes)
-    return stored
-
-
-def propose(job: Job, store: Store, inventory: Inventory, table: ChannelTable | None) -> Dossier:
-    """Return the dossier that a job would create, writing nothing.
 
     Raises
     ------

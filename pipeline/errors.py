@@ -24,6 +24,7 @@ to the driver, so every class must survive pickling (held by a test).
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Any
 
 
@@ -51,11 +52,7 @@ class ShardfoldError(Exception):
         self.what, self.where, self.rule, self.got, self.remedy = what, where, rule, got, remedy
 
     def __str__(self) -> str:
-        text = f"{self.where}: {self.what}" if self.where else self.what
-        for label, value in (("rule", self.rule), ("got", self.got), ("remedy", self.remedy)):
-            if value:
-                text += f"\n  {label}: {value}"
-        return text
+        return told(self.as_record())
 
     def __reduce__(self) -> tuple[Any, ...]:
         return (_rebuild, (type(self), self.__dict__, self.args))
@@ -64,6 +61,12 @@ class ShardfoldError(Exception):
         """Return the parts of the message that are set, for ``--json`` and the ledger."""
         names = ("what", "where", "rule", "got", "remedy")
         return {name: getattr(self, name) for name in names if getattr(self, name)}
+
+
+def told(parts: Mapping[str, str]) -> str:
+    """Return the message of an error's parts (`ShardfoldError.as_record`), a line for each after the first."""
+    lines = [f"{parts['where']}: {parts['what']}" if parts.get("where") else parts.get("what", "")]
+    return "\n".join(lines + [f"  {label}: {parts[label]}" for label in ("rule", "got", "remedy") if parts.get(label)])
 
 
 def _rebuild(kind: type[ShardfoldError], state: dict[str, Any], args: tuple[Any, ...]) -> ShardfoldError:

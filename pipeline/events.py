@@ -54,7 +54,10 @@ class StageDone:
 
 @dataclass(frozen=True)
 class Refused:
-    """A shard was refused; ``standing`` if an earlier run refused the same version for the same reason."""
+    """A shard was refused; ``standing`` if an earlier run refused the same version for the same reason.
+
+    The first line of ``message`` says what is wrong; rule, value and remedy follow, a line each.
+    """
 
     shard: str
     message: str

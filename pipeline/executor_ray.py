@@ -7,6 +7,8 @@ work that was stored. Credentials reach workers by the environment of their node
 from __future__ import annotations
 
 import os
+import shutil
+import tempfile
 from collections.abc import Iterator, Sequence
 from pathlib import Path
 from typing import Any
@@ -22,6 +24,7 @@ from shardfold.errors import ClusterFailed, ShardfoldError
 from shardfold.tasks import Outcome, Task, Workplace, perform
 
 STALL_SECONDS = 1800.0
+LONGEST_TEMPORARY_FOLDER = 30
 LOST_WORKER_RETRIES = 3
 
 
@@ -45,8 +48,13 @@ class RayExecutor:
 
     def __init__(self, workers: int | None, address: str | None, blas: str = "any") -> None:
         self._owns = not ray.is_initialized()
-        if self._owns:
-            _start(workers, address)
+        self._folder: Path | None = None
+        address = address or os.environ.get("RAY_ADDRESS")
+        if self._owns and address:
+            _init(address, {"address": address})
+        elif self._owns:
+            self._folder = Path(tempfile.mkdtemp(prefix="sf-ray-", dir=_short_temporary_folder()))
+            _init("local", _local_options(workers, self._folder))
         cpus = int(ray.cluster_resources().get("CPU", 1))
         # One more than there are CPUs keeps every worker busy; a number that was asked for is kept to.
         self._most_flying = min(workers, cpus) if workers else cpus + 1
@@ -95,29 +103,37 @@ class RayExecutor:
         """End the local Ray, or leave the cluster."""
         if self._owns and ray.is_initialized():
             ray.shutdown()
+        if self._folder is not None:
+            shutil.rmtree(self._folder, ignore_errors=True)
 
 
-def _start(workers: int | None, address: str | None) -> None:
-    options: dict[str, Any] = {"logging_level": "ERROR", "log_to_driver": False}
-    address = address or os.environ.get("RAY_ADDRESS")
-    if address:
-        options["address"] = address
-    else:
-        os.environ.setdefault("RAY_task_oom_retries", "3")
-        options |= {
-            "address": "local",
-            "num_cpus": workers,
-            "include_dashboard": False,
-            "object_store_memory": OBJECT_STORE_BYTES,
-        }
+def _local_options(workers: int | None, folder: Path) -> dict[str, Any]:
+    # Ray retries a task that ran out of memory for ever by default, and never removes its session folder.
+    os.environ.setdefault("RAY_task_oom_retries", "3")
+    return {
+        "address": "local",
+        "num_cpus": workers,
+        "include_dashboard": False,
+        "object_store_memory": OBJECT_STORE_BYTES,
+        "_temp_dir": str(folder),
+    }
+
+
+def _short_temporary_folder() -> str:
+    """Return a folder for Ray's sockets, whose paths may have 107 characters."""
+    usual = tempfile.gettempdir()
+    return usual if len(usual) <= LONGEST_TEMPORARY_FOLDER else "/tmp"
+
+
+def _init(place: str, options: dict[str, Any]) -> None:
     try:
-        ray.init(**options)
+        ray.init(logging_level="ERROR", log_to_driver=False, **options)
     except (ConnectionError, RuntimeError, ValueError, TimeoutError) as error:
         raise ClusterFailed(
-            "Ray could not be reached" if address else "a local Ray could not be started",
+            "a local Ray could not be started" if place == "local" else "Ray could not be reached",
             where="engine.address",
             rule="a running Ray cluster of this Ray version, or nothing for a local one",
-            got=f"{address or 'local'}: {str(error).splitlines()[0]}",
+            got=f"{place}: {str(error).splitlines()[0]}",
             remedy="check the address, or run with --set engine.workers=serial",
         ) from error
 

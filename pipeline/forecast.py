@@ -11,13 +11,16 @@ import numpy as np
 
 from shardfold import budget, dossier, layout
 from shardfold.blas import core_type, one_thread
+from shardfold.errors import InputError
 from shardfold.events import Listener
 from shardfold.gather import moment
+from shardfold.ingest import found_in, nothing_left, refusal_of
 from shardfold.job import Job
 from shardfold.kernels import cost
 from shardfold.kernels.whole import Shape, stored_dtype
+from shardfold.ledger import Entry
 from shardfold.plan import Cell, bytes_to_read, cut, tree
-from shardfold.run import reads_of, shapes_of
+from shardfold.run import check_rank, reads_of, shapes_of
 from shardfold.site import Site, look
 from shardfold.sums import leaf_names
 
@@ -28,10 +31,10 @@ ASSUMED_BYTES_PER_SECOND = 100e6
 
 @dataclass(frozen=True)
 class Forecast:
-    """A forecast as plain values, for people and for ``--json``."""
+    """A forecast as plain values, for people and for ``--json``, and the error that a run would end with at once."""
 
     figures: dict[str, Any]
-    refused: str = ""
+    refusal: InputError | None = None
 
 
 def forecast(job: Job, workers: int, listen: Listener) -> Forecast:
@@ -46,7 +49,7 @@ def forecast(job: Job, workers: int, listen: Listener) -> Forecast:
     listen : Listener
         Told what was found.
     """
-    site = look(job, listen, write=False, sample=FOOTERS_READ)
+    site = look(job, listen, sample=FOOTERS_READ)
     design = site.dossier.design
     shape = design.shape(1, design.width)
     facts = dossier.probe_facts(site.dossier.store, design, 1) if site.exists else None
@@ -62,11 +65,11 @@ def forecast(job: Job, workers: int, listen: Listener) -> Forecast:
     )
     # Where footers were sampled, amounts are scaled up to all shards; spans and memory are those of the sample.
     scale = _scale(site)
-    limit = job.engine.memory_bytes
+    refused = site.standing | {e.shard: refusal_of(e, site.shards[e.shard], site.under) for e in cutting.refused}
     figures = {
         "campaign": job.campaign,
-        "shards": _shards(site),
-        "samples": round(scale * sum(shard.rows for shard in site.shards.values())),
+        "shards": _shards(site, refused),
+        "samples": round(scale * sum(shard.rows for key, shard in site.shards.items() if key not in refused)),
         "channels": design.channels,
         "span": _span(site),
         "summary": _summary(design.identity, design.width, design.channels),
@@ -74,15 +77,24 @@ def forecast(job: Job, workers: int, listen: Listener) -> Forecast:
         "cells": {"all": round(scale * len(cells)), "stored": sum(cell.name in stored for cell in cells)},
         "reads": _reads(cells, stored, reads, design.identity, scale),
         "work": _work(shapes, cells, stored, workers, scale),
-        "memory": _memory(memory, limit),
+        "memory": _memory(memory, job.engine.memory_bytes),
         "storage_bytes": round(scale * _storage(shapes, cells, design.kernel)),
         "dossier": "exists" if site.exists else "would be created",
         "blas": core_type(),
     }
-    refusal = ""
-    if memory.worker_bytes > limit:
-        refusal = f"the plan needs {memory.worker_bytes} bytes per worker; engine.memory is {limit}"
-    return Forecast(figures, refusal)
+    return Forecast(figures, _refusal(site, cells, refused, memory))
+
+
+def _refusal(site: Site, cells: Sequence[Cell], refused: dict[str, Entry], memory: budget.Budget) -> InputError | None:
+    """Return the error with which a run would end before it reads, or ``None``."""
+    try:
+        check_rank(site)
+        if not cells:
+            raise nothing_left(refused)
+        budget.check(memory, site.job.engine.memory_bytes, cells)
+    except InputError as error:
+        return error
+    return None
 
 
 def _stored(site: Site) -> set[str]:
@@ -90,12 +102,12 @@ def _stored(site: Site) -> set[str]:
     return {parsed[2] for parsed in found if parsed is not None}
 
 
-def _shards(site: Site) -> dict[str, Any]:
+def _shards(site: Site, refused: dict[str, Entry]) -> dict[str, Any]:
     inventory = site.inventory
     return {
-        "to_take_in": len(site.shards),
+        "to_take_in": len(site.shards.keys() - refused.keys()),
         "left_for_later": len(inventory.unsettled),
-        "refused": {key: entry.why.get("what", "") for key, entry in sorted(site.standing.items())},
+        "refused": {key: found_in(entry) for key, entry in sorted(refused.items())},
         "not_listed_any_more": len(site.absent),
         "footers_read": "sampled" if inventory.sampled else "all",
     }

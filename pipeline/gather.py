@@ -1,8 +1,7 @@
 """Batches of a cell's shards become full blocks, blocks become one summary and the stored X: a cell as it is made.
 
-Blocks are cut by count from the cell's first sample on, across batches and shards, so row groups and read sizes leave
-no trace in the bits. What a block needs to be judged (which shard, row and time each sample has) stays beside it.
-No storage here: batches come in, arrays go out.
+Blocks are cut by count from the cell's first sample on, across batches and shards. What a block needs to be judged
+(which shard, row and time each sample has) comes beside it. No storage here: batches come in, arrays go out.
 """
 
 from __future__ import annotations
@@ -14,12 +13,13 @@ import numpy as np
 import numpy.typing as npt
 import xxhash
 
+from shardfold.block_cuts import Block, BlockCutter, channel_major, samples_of_leaf
 from shardfold.design import Design
 from shardfold.errors import ShardRefused
 from shardfold.ids import Shard
 from shardfold.kernels.addressed import STREAM_SAMPLE, name_keys, normals, shard_row_keys
 from shardfold.kernels.blocks import Preparation, find_first_bad
-from shardfold.kernels.whole import Probe, Shape, Summary, fold_block, to_arrays, zero
+from shardfold.kernels.whole import Probe, Shape, Summary, fold_block, stored_dtype, to_arrays, zero
 from shardfold.readers import Batch
 
 KEPT_SAMPLES = 2
@@ -67,6 +67,8 @@ class CellGather:
         Names, for messages.
     dtype : dtype
         One type that holds the values of all pieces.
+    rows : int
+        Most samples that will come.
     name : str
         The cell's name; chooses which raw values are kept.
     """
@@ -79,18 +81,17 @@ class CellGather:
         probe: Probe,
         channels: tuple[str, ...],
         dtype: np.dtype[np.generic],
+        rows: int,
         name: str,
     ) -> None:
         self._design, self._shape, self._preparation = design, shape, preparation
         self._probe, self._channels = probe, channels
-        self._dtype = dtype
-        self._buffer = np.empty((shape.m, 0), dtype)
-        self._times = np.empty(design.block_samples, np.int64)
-        self._owner = np.empty(design.block_samples, np.int64)
-        self._filled = 0
+        self._cutter = BlockCutter(shape.m, design.block_samples, dtype)
         self.summary: Summary = zero(shape)
-        self._all_times: list[Array] = []
-        self._x: list[Array] = []
+        # Memory that is never written to is never held, so too many rows cost nothing.
+        self._times = np.empty(rows, np.int64)
+        self._x = np.empty((0 if shape.identity else rows, shape.k), stored_dtype(dtype))
+        self._counts: list[int] = []
         self._centres: list[Array] = []
         self._tallies: list[_PieceTally] = []
         self._keeper = _Keeper(int(name[:16], 16))
@@ -107,18 +108,12 @@ class CellGather:
         ShardRefused
             If a value is not finite.
         """
-        times = batch.times if batch.times is not None else batch.first_row + np.arange(batch.values.shape[1])
-        values = batch.values
-        if not inside:
-            mask = times // self._design.leaf_ns == leaf
-            if not mask.all():
-                times, values = times[mask], _columns(values, mask)
+        times, values = samples_of_leaf(batch, self._design.leaf_ns, leaf, inside)
         if not len(times):
             return
         self._tally(times, values, batch.times is not None)
-        start = 0
-        while start < len(times):
-            start += self._fill(times[start:], values[:, start:])
+        for block in self._cutter.add(times, values, len(self._tallies) - 1):
+            self._fold(block)
 
     def finish(self) -> tuple[dict[str, Any], dict[str, Array]]:
         """Return the facts and arrays of the cell's record; the gatherer is spent.
@@ -128,18 +123,17 @@ class CellGather:
         ShardRefused
             If two samples have one time, or a value is not finite.
         """
-        self._close_block()
-        times = np.concatenate([*self._all_times, np.empty(0, np.int64)])
+        for block in self._cutter.rest():
+            self._fold(block)
+        times = self._times[: self.summary.n]
         if self._design.timed:
             check_repeats(times, [(t.shard.key, t.shard.info.version, t.rows) for t in self._tallies])
         facts = {"n": self.summary.n, "pieces": [tally.record() for tally in self._tallies]}
         arrays = {**to_arrays(self.summary), "times": times, **self._keeper.kept}
         if not self._shape.identity:
-            counts = [len(x) for x in self._x]
-            dtype = self._x[0].dtype if self._x else np.dtype(np.float64)
-            arrays["x"] = np.concatenate([*self._x, np.empty((0, self._shape.k), dtype)])
-            arrays["x_counts"] = np.asarray(counts, np.int64)
-            arrays["x_centres"] = np.asarray(self._centres, np.float64).reshape(len(counts), self._shape.k)
+            arrays["x"] = self._x[: self.summary.n]
+            arrays["x_counts"] = np.asarray(self._counts, np.int64)
+            arrays["x_centres"] = np.asarray(self._centres, np.float64).reshape(len(self._counts), self._shape.k)
         return facts, arrays
 
     def _tally(self, times: Array, values: Array, timed: bool) -> None:
@@ -150,67 +144,42 @@ class CellGather:
             tally.first = low if tally.first is None else min(tally.first, low)
             tally.last = high if tally.last is None else max(tally.last, high)
             tally.hasher.update(np.ascontiguousarray(times))
-        tally.hasher.update(np.ascontiguousarray(values if _channel_major(values) else values.T))
+        tally.hasher.update(np.ascontiguousarray(values if channel_major(values) else values.T))
 
-    def _fill(self, times: Array, values: Array) -> int:
-        if not self._buffer.size:
-            # Blocks take the memory order of the layout: whole channels or whole samples side by side.
-            order: Any = "C" if _channel_major(values) else "F"
-            self._buffer = np.empty((self._shape.m, self._design.block_samples), self._dtype, order=order)
-        count: int = min(len(times), self._buffer.shape[1] - self._filled)
-        place = slice(self._filled, self._filled + count)
-        self._buffer[:, place] = values[:, :count]
-        self._times[place] = times[:count]
-        self._owner[place] = len(self._tallies) - 1
-        self._filled += count
-        if self._filled == self._buffer.shape[1]:
-            self._close_block()
-        return count
-
-    def _close_block(self) -> None:
-        n = self._filled
-        if n == 0:
-            return
-        raw, times = self._buffer[:, :n], self._times[:n].copy()
+    def _fold(self, block: Block) -> None:
+        first, n = self.summary.n, len(block.times)
+        checks = self._sample_checks(block)
         try:
-            block = fold_block(
-                self.summary, raw, self._preparation, self._probe, self._sample_checks(n), np.empty((0, n))
-            )
+            made = fold_block(self.summary, block.raw, self._preparation, self._probe, checks, np.empty((0, n)))
         except FloatingPointError as error:
-            raise self._not_finite(raw) from error
-        if block is not None:
-            self._x.append(np.ascontiguousarray(block.x.T))
-            self._centres.append(block.centre)
-        self._keeper.look(raw, len(self._all_times), sum(map(len, self._all_times)))
-        self._all_times.append(times)
-        self._filled = 0
+            raise self._not_finite(block) from error
+        if made is not None:
+            self._x[first : first + n] = made.x.T
+            self._centres.append(made.centre)
+        self._keeper.look(block.raw, len(self._counts), first)
+        self._times[first : first + n] = block.times
+        self._counts.append(n)
 
-    def _sample_checks(self, n: int) -> Array:
-        keys = self._times[:n].view(np.uint64)
+    def _sample_checks(self, block: Block) -> Array:
+        keys = block.times.view(np.uint64)
         if not self._design.timed:
-            keys = np.empty(n, np.uint64)
-            for number in np.unique(self._owner[:n]):
-                mine = self._owner[:n] == number
-                keys[mine] = shard_row_keys(self._tallies[number].shard.key, self._times[:n][mine])
+            keys = np.empty(len(block.times), np.uint64)
+            for number in np.unique(block.owners):
+                mine = block.owners == number
+                keys[mine] = shard_row_keys(self._tallies[number].shard.key, block.times[mine])
         return normals(self._design.seed, STREAM_SAMPLE, keys, self._shape.q_xi)
 
-    def _not_finite(self, raw: Array) -> ShardRefused:
-        found = find_first_bad(raw)
+    def _not_finite(self, block: Block) -> ShardRefused:
+        found = find_first_bad(block.raw)
         if found is None:
-            return self._refuse(
-                0, "values overflow when gain, scale and weight are applied", "finite prepared values", "overflow"
-            )
+            what, rule = "values overflow when gain, scale and weight are applied", "finite prepared values"
+            return self._refuse(block, 0, what, rule, "overflow")
         channel, sample, value = found
-        what = f"channel {self._channels[channel]} is {value} at {self._moment(sample)}"
-        return self._refuse(
-            sample,
-            what,
-            "design.gaps: refuse (every value must be finite)",
-            str(value),
-        )
+        what = f"channel {self._channels[channel]} is {value} at {self._moment(int(block.times[sample]))}"
+        return self._refuse(block, sample, what, "design.gaps: refuse (every value must be finite)", str(value))
 
-    def _refuse(self, sample: int, what: str, rule: str, got: str) -> ShardRefused:
-        shard = self._tallies[int(self._owner[sample])].shard
+    def _refuse(self, block: Block, sample: int, what: str, rule: str, got: str) -> ShardRefused:
+        shard = self._tallies[int(block.owners[sample])].shard
         return ShardRefused(
             what,
             shard=shard.key,
@@ -220,9 +189,8 @@ class CellGather:
             remedy="mend the shard, or leave the channel out with source.channels.exclude in a new dossier",
         )
 
-    def _moment(self, sample: int) -> str:
-        value = int(self._times[sample])
-        return moment(value) if self._design.timed else f"row {value}"
+    def _moment(self, time: int) -> str:
+        return moment(time) if self._design.timed else f"row {time}"
 
 
 class _Keeper:
@@ -282,19 +250,10 @@ def check_repeats(times: Array, owners: list[tuple[str, str, int]]) -> None:
         rival=key_a,
         rule="a time is given once in a campaign",
         got=f"{moment(int(times[order[same[0]]]))}",
-        remedy="take out one of the two shards, or mend the times",
+        remedy="mend the times in the shard" if key_a == key_b else f"mend the times in one of them, or remove {key_b}",
     )
 
 
 def moment(nanoseconds: int) -> str:
     """Return an instant as ISO 8601 in UTC, with as many decimals of a second as it needs."""
     return str(np.datetime64(nanoseconds, "ns")).rstrip("0").rstrip(".") + "Z"
-
-
-def _columns(values: Array, mask: Array) -> Array:
-    """Return the chosen samples in the memory order of `values`."""
-    return values[:, mask] if _channel_major(values) else values.T[mask].T
-
-
-def _channel_major(values: Array) -> bool:
-    return bool(values.strides[0] > values.strides[1])

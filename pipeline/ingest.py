@@ -6,15 +6,15 @@ the cells it shared are planned again without it, and the loop ends when a plan 
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field, replace
 from itertools import pairwise
 from typing import Any
 
 import numpy as np
 
 from shardfold import artifacts, layout
-from shardfold.errors import InputError, ShardRefused, WriterConflict
+from shardfold.errors import InputError, ShardRefused, WriterConflict, told
 from shardfold.events import Committed, Listener, Refused, StageDone, StageStarted, TaskDone
 from shardfold.executor import Executor
 from shardfold.gather import check_repeats
@@ -71,22 +71,36 @@ class Intake:
 
     def drop(self, error: ShardRefused) -> None:
         """Take a refused shard out of what shall be in; of two rivals the one already in stays."""
-        key = error.shard
-        if error.rival and self.is_in(key) and not self.is_in(error.rival):
-            key = error.rival
+        key, rival = error.shard, error.rival
+        if rival and rival not in self.shards:
+            return  # one of the two is out already: the next plan shows whether the other is sound
+        if rival and self.is_in(key) and not self.is_in(rival):
+            key, rival = rival, key
         shard = self.shards.pop(key, None)
         if shard is None:
             return
-        why = {**error.as_record(), "where": key}
-        entry = Entry(key, shard.info.version, "refused", self.under, shard, why=why)
+        entry = refusal_of(error, shard, self.under)
+        if rival not in ("", key):
+            version = {} if rival in self.absent else {"rival_version": self.version(rival)}
+            where = {} if key == error.shard else {"where": key}
+            entry = replace(entry, why={**entry.why, **where, "rival": rival, **version})
         self.refuse(entry)
+
+    def first_to_drop(self, error: ShardRefused) -> tuple[bool, bool, str]:
+        """Sort refusals so that no shard is dropped for the sake of one that is dropped later."""
+        neither_in = not (self.is_in(error.shard) or self.is_in(error.rival))
+        return bool(error.rival), neither_in, error.shard
+
+    def version(self, key: str) -> str:
+        """Return the version of a shard that shall be in."""
+        return self.shards[key].info.version
 
     def refuse(self, entry: Entry) -> None:
         """Note a refusal and say it, once."""
         before = self.ledger.entry(entry.key, entry.version)
         standing = before is not None and before.state == "refused" and before.why == entry.why
         self.refused[entry.key] = entry
-        self.listen(Refused(entry.key, entry.why.get("what", ""), standing))
+        self.listen(Refused(entry.key, message_of(entry), standing))
 
     def rows_of(self, read: int) -> dict[int, int]:
         """Return the samples of each leaf that is in, by the ledger."""
@@ -115,13 +129,13 @@ def bring_in(intake: Intake, read: int, shape: Shape, probe_digest: str) -> tupl
         refusals = blocked or _read(intake, read, shape, cells, todo)
         if not refusals:
             refusals = _rivals(intake, read, cells)
-        for error in refusals:
+        for error in sorted(refusals, key=intake.first_to_drop):
             if read > 1:
                 raise _changed_between_reads(error)
             intake.drop(error)
         if not intake.shards:
             _commit(intake, read, ())
-            raise _nothing_left(intake)
+            raise nothing_left(intake.refused)
         if not refusals:
             _commit(intake, read, cells, final=True)
             return cells
@@ -295,6 +309,7 @@ def _beside_vanished(shard: Shard, gone: str) -> ShardRefused:
         "it shares a small cell with a shard that has vanished",
         shard=shard.key,
         version=shard.info.version,
+        rival=gone,
         rule="to add it, all small shards of its leaf are read again",
         got=f"{gone} is not listed any more",
         remedy=f"put {gone} back under its name, then run again",
@@ -340,15 +355,32 @@ def _overlap(cells: Sequence[tuple[dict[str, Any], ...]]) -> bool:
     return any(later[0] <= earlier[1] for earlier, later in pairwise(spans))
 
 
-def _nothing_left(intake: Intake) -> InputError:
-    key, entry = next(iter(sorted(intake.refused.items())))
+def message_of(entry: Entry) -> str:
+    """Return why a shard is refused: what, with the place within the shard, and a line each for the other parts."""
+    place = entry.why.get("where", "").removeprefix(entry.key).removeprefix(", ")
+    return told({**entry.why, "where": place})
+
+
+def refusal_of(error: ShardRefused, shard: Shard, under: str) -> Entry:
+    """Return what the ledger says of a shard that is refused."""
+    return Entry(shard.key, shard.info.version, "refused", under, shard, why=error.as_record())
+
+
+def nothing_left(refused: Mapping[str, Entry]) -> InputError:
+    """Return the error for a campaign of which every shard is refused."""
+    key, entry = min(refused.items())
     return InputError(
         "no shard can be taken in",
         where=key,
-        rule="at least one shard that can be trusted",
-        got=f"{len(intake.refused)} refused; the first: {entry.why.get('what', '')}",
+        rule=entry.why.get("rule", "at least one shard that can be trusted"),
+        got=f"{len(refused)} refused; the first: {found_in(entry)}",
         remedy=entry.why.get("remedy", "see the reasons above"),
     )
+
+
+def found_in(entry: Entry) -> str:
+    """Return in one line what is wrong with a refused shard, and the value that shows it."""
+    return "; got ".join(entry.why[part] for part in ("what", "got") if entry.why.get(part))
 
 
 def _changed_between_reads(error: ShardRefused) -> InputError:

@@ -81,7 +81,7 @@ def _regex_part(part: str) -> str:
         return _PARTS[part]
     if len(part) == 1:
         return re.escape(part)
-    body = part[1:-1].replace("\\", "\\\\").replace("[", "\\[")
+    body = re.sub(r"([\\\[&~|])", r"\\\1", part[1:-1]).replace("--", r"\-")
     return f"[^{body[1:]}/]" if body[0] in "!^" else f"[{body}]"
 
 

@@ -84,7 +84,7 @@ def broken_relations(root: Entry, faulty: frozenset[str], folder: Path) -> list[
 
 def _time_of_layout(written: Written) -> Iterator[Fault]:
     layout_name, time = written.value("source.layout"), written.value("source.time")
-    if not written.given("source.time") and written.is_section("source"):
+    if written.is_section("source") and written.root.at(("source", "time")) is None:
         example = "time: {from_name: REGEX, step: 125 ms}" if layout_name == "array" else "time: COLUMN"
         yield written.fault("source.time", "is needed and missing", f"write {example}, or time: none if there are none")
     elif layout_name == "array" and isinstance(time, str) and time != "none":

@@ -94,8 +94,9 @@ def time_keys(value: Any) -> Any:
 
 
 def time_kind(value: Any) -> str:
-    """Return which of the three kinds a value of `time_keys` is."""
-    return next((f"<{key}>" for key in ("from_name", "start") if key in value), "<column>")
+    """Return which of the three kinds a value of `time_keys` is, or the model made of it, as when it is dumped."""
+    keys = value if isinstance(value, dict) else value.model_dump(by_alias=True)
+    return next((f"<{key}>" for key in ("from_name", "start") if key in keys), "<column>")
 
 
 def positive_duration(value: object) -> int:
@@ -133,7 +134,7 @@ def always_true(value: object) -> bool:
     """Return true: the mean is kept beside the sums in any case."""
     if value is not True:
         rule = "must be true: the mean is kept in any case, so that it can be removed or not after the fact"
-        raise RuleBroken(rule, "write modes.remove: [] to leave it in the modes")
+        raise RuleBroken(rule, "write modes.remove: [] to leave it in")
     return True
 
 

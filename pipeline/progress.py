@@ -31,6 +31,8 @@ from shardfold.events import (
 )
 
 LINE_SECONDS = 10.0
+TOLD_IN_FULL = 20
+"""Refused shards that are told with rule, value and remedy; of the others one line is said."""
 
 
 class Teller:
@@ -50,7 +52,7 @@ class Teller:
         self._total, self._done, self._bytes, self._bytes_total = 0, 0, 0, 0
         self._shards, self._shards_total = 0, 0
         self._begin = self._said = 0.0
-        self.refused: list[Refused] = []
+        self._refused = 0
 
     def __enter__(self) -> Teller:
         return self
@@ -67,11 +69,16 @@ class Teller:
         elif isinstance(event, StageDone):
             self._end_stage(event)
         elif isinstance(event, Refused):
-            self.refused.append(event)
-            if not event.standing:
-                self._line(f"refused {event.shard}: {event.message}", always=True)
+            self._refuse(event)
         else:
             self._line(_sentence(event))
+
+    def _refuse(self, event: Refused) -> None:
+        if event.standing:
+            return
+        self._refused += 1
+        told = event.message if self._refused <= TOLD_IN_FULL else event.message.partition("\n")[0]
+        self._line(f"refused {event.shard}: {told}", always=True)
 
     def _start(self, event: StageStarted) -> None:
         self._total, self._done = event.tasks, 0

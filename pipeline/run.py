@@ -24,7 +24,7 @@ from shardfold.executor import Executor
 from shardfold.finish import finding_of, too_few_samples, write_parts, write_probe
 from shardfold.gather import moment
 from shardfold.ids import digest_value
-from shardfold.ingest import Intake, bring_in
+from shardfold.ingest import Intake, bring_in, nothing_left
 from shardfold.job import Job
 from shardfold.kernels.factors import probe_width
 from shardfold.kernels.whole import Shape, Summary
@@ -80,15 +80,17 @@ def run(job: Job, make_executor: Callable[[], Executor], listen: Listener) -> Re
         See `errors.py` for what to do about each kind.
     """
     started = datetime.now(UTC)
-    site = look(job, listen, write=True)
+    site = look(job, listen)
     executor = Deferred(make_executor)
     try:
-        _check_rank(site)
+        check_rank(site)
         intake = _intake(site, executor, listen)
         reads = reads_of(job, site.dossier.design)
         if reads < job.modes.reads:
             listen(Noted("the probe is the identity and exact: one read is enough"))
         _refuse_too_large(site, intake, reads)
+        if not site.exists and dossier.create(site.dossier).design != site.dossier.design:
+            return run(job, make_executor, listen)  # another writer was faster: look again, at what he made
         probes: list[str] = []
         for read in range(1, reads + 1):
             shape, digest = plan_read(site, intake, read)
@@ -172,15 +174,18 @@ def shapes_of(design: Design, rank: int, reads: int) -> list[Shape]:
 
 
 def _refuse_too_large(site: Site, intake: Intake, reads: int) -> None:
-    """Refuse before the first read what any of the reads would need too much memory for."""
+    """Refuse before the first read, and before a dossier is made, what any of the reads has too little memory for."""
     design, engine, rank = site.dossier.design, site.job.engine, site.job.modes.rank
     for read, shape in enumerate(shapes_of(design, rank, reads), 1):
         cells = intake.cells(read, shape, "")
+        if not cells and not site.exists:
+            raise nothing_left(intake.refused)
         plan = budget.budget(design, shape, cells, rank, 1, engine.workers == "serial")
         budget.check(plan, engine.memory_bytes, cells)
 
 
-def _check_rank(site: Site) -> None:
+def check_rank(site: Site) -> None:
+    """Refuse more modes than there are samples or channels, or than the probe can carry."""
     rows = sum(shard.rows for shard in site.shards.values())
     if site.job.modes.rank > rows:
         raise too_few_samples(site.job.modes.rank, rows)

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import time
 import uuid
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -73,8 +73,8 @@ def settings(job: Job, which: str) -> StoreSettings:
     return StoreSettings(place.location, place.storage.endpoint, place.storage.region, place.storage.anonymous)
 
 
-def look(job: Job, listen: Listener, *, write: bool, sample: int | None = None) -> Site:
-    """Return how campaign and dossier stand.
+def look(job: Job, listen: Listener, *, sample: int | None = None) -> Site:
+    """Return how campaign and dossier stand; a dossier that does not exist is proposed, nothing is written.
 
     Parameters
     ----------
@@ -82,8 +82,6 @@ def look(job: Job, listen: Listener, *, write: bool, sample: int | None = None) 
         The settings.
     listen : Listener
         Told what was found.
-    write : bool
-        Create the dossier if it does not exist; otherwise it is only proposed.
     sample : int, optional
         Read at most so many footers.
 
@@ -109,7 +107,7 @@ def look(job: Job, listen: Listener, *, write: bool, sample: int | None = None) 
     if standing and not shards:
         raise _nothing_readable(job, standing)
     listen(Found(len(shards), len(inventory.unsettled), len(standing)))
-    opened = _open(job, store, inventory, table, stored, write)
+    opened = _open(job, store, inventory, table, stored)
     _check_agreement(shards, standing, opened, under, known)
     absent = _absent(state, inventory, shards, opened.table)
     _tell(listen, inventory, absent)
@@ -121,19 +119,31 @@ def look(job: Job, listen: Listener, *, write: bool, sample: int | None = None) 
 def _sort_out(inventory: Inventory, state: Ledger, under: str) -> tuple[dict[str, Shard], dict[str, Entry]]:
     """Part the inventory into shards to take in and refusals, those of earlier runs that still hold included."""
     shards, standing = {}, {}
+    listed = {shard.key: shard.info.version for shard in inventory.shards}
     for refusal in inventory.refused:
         standing[refusal.key] = Entry(refusal.key, refusal.version, "refused", under, why=dict(refusal.error_record))
     for shard in inventory.shards:
         before = state.entry(shard.key, shard.info.version)
-        if before is not None and before.state == "refused" and before.under == under:
+        if before is not None and before.under == under and _still_refused(before, state, listed):
             standing[shard.key] = before
         else:
             shards[shard.key] = shard
     return shards, standing
 
 
+def _still_refused(entry: Entry, state: Ledger, listed: Mapping[str, str]) -> bool:
+    """Return whether a refusal of an earlier run still holds: one for a rival's sake does while that is as it was."""
+    rival, version = entry.why.get("rival"), entry.why.get("rival_version")
+    if entry.state != "refused" or rival is None:
+        return entry.state == "refused"
+    if version is None or rival in listed:
+        return listed.get(rival) == version
+    kept = state.entry(rival, version)
+    return kept is not None and kept.state == "in"
+
+
 def _open(
-    job: Job, store: Store, inventory: Inventory, table: ChannelTable | None, stored: Dossier | None, write: bool
+    job: Job, store: Store, inventory: Inventory, table: ChannelTable | None, stored: Dossier | None
 ) -> Dossier:
     if stored is None and not inventory.shards:
         raise InputError(
@@ -143,9 +153,10 @@ def _open(
             got="only younger ones",
             remedy="run again later, or --set 'source.settle=0 s' if nothing is being written",
         )
-    if stored is None and not write:
+    if stored is None:
         return dossiers.propose(job, store, inventory, table)
-    return dossiers.open_dossier(job, store, inventory, table)
+    dossiers.check_design(stored, job, inventory, table)
+    return stored
 
 
 def _check_agreement(

@@ -34,7 +34,8 @@ __all__ = [
 ATTEMPTS = 4
 
 _SCHEME = re.compile(r"^([a-z][a-z0-9+.-]+)://", re.IGNORECASE)
-_USER = re.compile(r"^[a-z][a-z0-9+.-]*://[^/]*@", re.IGNORECASE)
+# A secret may hold slashes, so a colon that begins no port counts up to any @.
+_USER = re.compile(r"^[a-z][a-z0-9+.-]*://([^/]*|[^/@]*:(?!\d+(/|$)).*)@", re.IGNORECASE)
 _NOWHERE = re.compile(r"^(s3:///.*|s3://|)$", re.IGNORECASE)
 _ENDPOINT = re.compile(r"^https?://[^/@\s?#]+/?$", re.IGNORECASE)
 

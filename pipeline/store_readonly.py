@@ -132,11 +132,12 @@ class ReadOnlyAdapter:
 
 
 def _info(key: str, entry: Mapping[str, Any]) -> ObjectInfo:
-    lowered = {name.lower(): value for name, value in entry.items()}
+    etag = next((value for name, value in entry.items() if name.lower() == "etag" and value), None)
     changed = next((entry[name] for name in _CHANGED if entry.get(name) is not None), None)
-    size = int(entry["size"] or 0)
-    mark = lowered.get("etag") or changed or ""
-    return ObjectInfo(key, f"{str(mark).strip(chr(34))}:{size}", size, _seconds(changed))
+    size, seconds = int(entry["size"] or 0), _seconds(changed)
+    # One storage may give the same time as a number in one answer and as a date in the next.
+    mark = str(etag).strip('"') if etag else str(seconds or changed or "")
+    return ObjectInfo(key, f"{mark}:{size}", size, seconds)
 
 
 def _seconds(changed: Any) -> float:

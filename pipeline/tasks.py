@@ -8,7 +8,8 @@ Nothing here knows how tasks reach a worker.
 from __future__ import annotations
 
 import io
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
+from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass
 from functools import lru_cache
 from typing import Any, TypeAlias
@@ -28,8 +29,9 @@ from shardfold.kernels.addressed import STREAM_CHECK, name_keys, normals
 from shardfold.kernels.blocks import Preparation
 from shardfold.kernels.spectra import segment_power
 from shardfold.kernels.whole import Probe, Shape, Summary, from_arrays, merge_into, to_arrays
-from shardfold.plan import Cell, Node
-from shardfold.readers import Reader, reader_for
+from shardfold.plan import Cell, Node, Piece
+from shardfold.project import CellProjector
+from shardfold.readers import Fetched, Reader, reader_for
 from shardfold.store import Counting, Store, StoreSettings, connect
 from shardfold.tables import coefficient_table
 
@@ -162,13 +164,15 @@ def read_cell(workplace: Workplace, task: ReadCell) -> CellRead:
         _probe(workplace, cell.read, task.shape),
         desk.table.names,
         cell.dtype,
+        cell.rows,
         cell.name,
     )
     _each_batch(desk, cell, gather)
     facts, arrays = gather.finish()
     facts |= {"read": cell.read, "leaf": cell.leaf, "design": workplace.design.digest, "core": core_type()}
-    del gather
-    desk.dossier.create(layout.cell_key(cell.read, cell.leaf, cell.name), artifacts.pack("cell", facts, arrays))
+    record = artifacts.pack("cell", facts, arrays)
+    del gather, arrays
+    desk.dossier.create(layout.cell_key(cell.read, cell.leaf, cell.name), record)
     return CellRead(tuple(facts["pieces"]), facts["n"], facts["core"], store.snapshot().bytes_read - before)
 
 
@@ -273,40 +277,39 @@ def _coefficients_of_x(workplace: Workplace, desk: _Desk, cell: Cell, task: Writ
 def _coefficients_by_reading(
     workplace: Workplace, desk: _Desk, cell: Cell, task: WriteCoefficients
 ) -> tuple[Array, ...]:
-    collector = _Projector(workplace.design, desk.preparation, task.mapping, cell.leaf)
-    _each_batch(desk, cell, collector)
-    return collector.finish()
+    mapping = task.mapping
+    projector = CellProjector(workplace.design, desk.preparation, mapping.rows, mapping.centre, cell.dtype)
+    _each_batch(desk, cell, projector)
+    return projector.finish()
 
 
-class _Projector:
-    """Projects prepared raw samples on the modes, batch by batch."""
+def _each_batch(desk: _Desk, cell: Cell, sink: CellGather | CellProjector) -> None:
+    """Hand all batches of a cell on; the next row group travels while the batches of one are worked on.
 
-    def __init__(self, design: Design, preparation: Preparation, mapping: CoefficientMap, leaf: int) -> None:
-        self._design, self._preparation, self._mapping = design, preparation, mapping
-        self._parts: list[tuple[Array, Array, Array]] = []
-        self._owner = ""
-
-    def begin(self, shard: Any) -> None:
-        self._owner = shard.key
-
-    def take(self, batch: Any, leaf: int, inside: bool) -> None:
-        times = batch.times if batch.times is not None else batch.first_row + np.arange(batch.values.shape[1])
-        mask = np.ones(len(times), bool) if inside else times // self._design.leaf_ns == leaf
-        prepared = self._preparation.prepare(batch.values[:, mask]) - self._mapping.centre[:, None]
-        owner = "" if self._design.timed else self._owner
-        self._parts.append((times[mask], np.full(int(mask.sum()), owner), self._mapping.rows @ prepared))
-
-    def finish(self) -> tuple[Array, ...]:
-        return tuple(np.concatenate(arrays, axis=-1) for arrays in zip(*self._parts, strict=True))
+    It sets out when the first batch is decoded: most readers hold no stored bytes of their own by then.
+    """
+    groups, current = _fetched(desk, cell), None
+    with ThreadPoolExecutor(1, "fetch ahead") as thread:
+        ahead: Future[tuple[Piece, Fetched] | None] | None = thread.submit(next, groups, None)
+        while ahead is not None and (group := ahead.result()) is not None:
+            (piece, decode), ahead, group = group, None, None
+            if piece is not current:
+                sink.begin(piece.shard)
+            batches, current = decode(), piece
+            del decode
+            for batch in batches:
+                ahead = ahead or thread.submit(next, groups, None)
+                sink.take(batch, cell.leaf, piece.inside)
+                del batch
 
 
-def _each_batch(desk: _Desk, cell: Cell, sink: CellGather | _Projector) -> None:
+def _fetched(desk: _Desk, cell: Cell) -> Iterator[tuple[Piece, Fetched]]:
     for piece in cell.pieces:
-        sink.begin(piece.shard)
         try:
             for start, stop in piece.runs:
-                for batch in desk.reader.batches(desk.campaign, piece.shard, start, stop, desk.table.names):
-                    sink.take(batch, cell.leaf, piece.inside)
+                for group in desk.reader.fetched(desk.campaign, piece.shard, start, stop, desk.table.names):
+                    yield piece, group
+                    del group
         except VersionChanged as error:
             raise ShardRefused(
                 "the shard was replaced or removed while it was read",

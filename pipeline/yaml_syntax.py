@@ -43,6 +43,8 @@ def _tabbed(lines: list[str]) -> list[int]:
 def _meaning(lines: list[str], complaint: Complaint) -> tuple[tuple[int, int], str, str]:
     """Return where the mistake is, the rule and the remedy."""
     words = f"{complaint.context} {complaint.problem}"
+    if "'\\t'" in complaint.problem:
+        return complaint.at, "a tab cannot stand here: YAML takes only blanks", "replace it by blanks"
     sign = re.search(r"scanning an (alias|anchor)|undefined (alias)|cannot start any (token)", words)
     if sign:
         at = complaint.at if "undefined" in words or "token" in words else complaint.since
@@ -72,7 +74,13 @@ def _start_of_pattern(line: str, column: int) -> int:
 
 def _in_quotes(value: str, key: str, keys: list[str]) -> str:
     """Return what to write, unless it could show a secret."""
-    if not value or '"' in value or "\\" in value or holds_secret(value) or looks_secret(("storage", *keys[-1:])):
+    if (
+        not value
+        or '"' in value
+        or "\\" in value
+        or holds_secret(value)
+        or any(looks_secret(("storage", key)) for key in keys)
+    ):
         return "put it in quotes"
     return f'write {key}: "{value}"' if key else f'write "{value}"'
 
@@ -82,6 +90,7 @@ _INNER = "and put values that hold , [ ] { } or # in quotes"
 _MEANINGS = (
     ("unknown escape", False, "a backslash inside double quotes is an escape in YAML", "use single quotes instead"),
     ("scanning a (double-)?quoted scalar", True, "the quote that opens here is not closed", "close it"),
+    ("stream end", False, "the text ends before a [ or { is closed", "close it"),
     ("single document", False, "a second document starts here; a job is one document", "remove the line ---"),
     ("document start", False, "text follows after the end of the document", "remove the line ... above"),
     ("sequence entries are not", False, "a list must start on a line of its own", "write [a, b] on this line"),
@@ -97,17 +106,27 @@ def _structure(lines: list[str], complaint: Complaint, words: str) -> tuple[tupl
     glued = _glued(lines, complaint)
     if glued is not None:
         return glued, "a blank must follow the colon after a key", "write key: value"
+    bare = _bare(lines, complaint.at[0]) if "mapping values are not allowed" in words else None
+    if bare is not None or "simple key" in words:
+        rule = "this line is neither a key with a colon nor part of a value"
+        return bare or complaint.since, rule, "write key: value"
     if "mapping values are not allowed" in words:
         rule = "a key cannot stand here: the line is indented below a value, or its value holds a colon and a blank"
         return complaint.at, rule, "align the key with its neighbours, or put the value in quotes"
-    if "simple key" in words:
-        return complaint.since, "this line is neither a key with a colon nor part of a value", "write key: value"
     if "'<scalar>'" in words:
         return complaint.at, "text follows after a closed quote or bracket", "put the whole value in one pair of quotes"
     if "<block end>" in words:
         return complaint.at, "the indentation fits no line above", "align the key with its neighbours"
     problem = re.sub(r"'[^'<]{2,}'", "...", complaint.problem)  # names of anchors and tags may be secrets
     return complaint.at, f"is not valid YAML here: {problem}", ""
+
+
+def _bare(lines: list[str], number: int) -> tuple[int, int] | None:
+    """Return where the words without a colon start that run on into the key of a line."""
+    above = [line for line in range(number) if lines[line].strip()]
+    if not above or ":" in lines[above[-1]] or lines[above[-1]].lstrip().startswith("#"):
+        return None
+    return above[-1], len(lines[above[-1]]) - len(lines[above[-1]].lstrip())
 
 
 def _glued(lines: list[str], complaint: Complaint) -> tuple[int, int] | None:

@@ -16,6 +16,7 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
+
 from shardfold.executor import Executor, SerialExecutor
 from shardfold.job import parse_job
 from shardfold.results import Result, open_result
@@ -140,8 +141,12 @@ class Found:
     def coefficients(self) -> Array:
         """Coefficients (r, n) in the order of the written matrix."""
         table = self.result.coefficients()
-        order = [(name, "ascending") for name in table.column_names if not name.startswith("c_")]
-        return _matrix(table.sort_by(order), "c", len(self.values))
+        values = _matrix(table, "c", len(self.values))
+        if "shard" not in table.column_names:
+            return values
+        # Without times, parts go by the hash of the shard's name.
+        order = np.lexsort((table.column("row").to_numpy(), np.array(table.column("shard").to_pylist())))
+        return values[:, order]
 
     @cached_property
     def mean(self) -> Array:

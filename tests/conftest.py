@@ -21,15 +21,10 @@ from sniffing_proxy import SniffingProxy
 
 @dataclass(frozen=True)
 class Bucket:
-    """A fresh, empty bucket of the session's server."""
+    """A fresh, empty bucket, or an empty folder of a bucket, of the session's server."""
 
     location: str
     endpoint: str
-
-    @property
-    def bucket(self) -> str:
-        """Return the bucket's name."""
-        return self.location.removeprefix("s3://")
 
 
 @pytest.fixture(scope="session")
@@ -44,12 +39,26 @@ def s3() -> Iterator[Seaweed]:
 
 
 @pytest.fixture
-def bucket(s3: Seaweed, request: pytest.FixtureRequest) -> Bucket:
-    """Make a bucket whose name begins with the test's."""
+def bucket(s3: Seaweed, request: pytest.FixtureRequest) -> Iterator[Bucket]:
+    """Make a bucket whose name begins with the test's, and delete it afterwards; costs about a second."""
     stem = re.sub(r"[^a-z0-9]+", "-", request.node.name.lower()).strip("-")[:40]
     name = f"{stem}-{uuid4().hex[:12]}"
     s3.make_bucket(name)
-    return Bucket(f"s3://{name}", s3.endpoint)
+    yield Bucket(f"s3://{name}", s3.endpoint)
+    s3.delete_bucket(name)
+
+
+@pytest.fixture(scope="session")
+def shared_bucket(s3: Seaweed) -> str:
+    """Make one bucket for all tests that need no more than a folder of it."""
+    s3.make_bucket("shared")
+    return "shared"
+
+
+@pytest.fixture
+def folder(s3: Seaweed, shared_bucket: str) -> Bucket:
+    """Name an empty folder of the shared bucket, at no cost."""
+    return Bucket(f"s3://{shared_bucket}/{uuid4().hex[:12]}", s3.endpoint)
 
 
 @pytest.fixture

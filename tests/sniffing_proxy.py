@@ -59,7 +59,7 @@ class SniffingProxy:
         self._lock = threading.Lock()
         self._counts: Counter[tuple[str, str]] = Counter()
         self._faults: list[Fault] = []
-        self.before: Callable[[str, str], None] | None = None
+        self.before: Callable[[str, str], object] | None = None
         self._server = _Server((LOOPBACK, 0), _handler_of(self))
         self.endpoint = f"http://{LOOPBACK}:{self._server.server_address[1]}"
         self._thread = threading.Thread(target=self._server.serve_forever, args=(0.01,), daemon=True)

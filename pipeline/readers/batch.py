@@ -1,13 +1,13 @@
-"""What every reader promises: a batch of samples, the reader's two calls, and what a reader needs of a store.
+"""What every reader promises: a batch of samples, the reader's calls, and what a reader needs of a store.
 
 No file format is known here.
 """
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
-from typing import Any, Protocol
+from typing import Any, Protocol, TypeAlias
 
 import numpy as np
 from numpy.typing import NDArray
@@ -22,7 +22,7 @@ SCRATCH_BYTES = 32 * 2**20
 
 @dataclass(frozen=True, eq=False)
 class Batch:
-    """The samples of one row group.
+    """Some samples of one row group: those of a slice where whole samples are stored side by side, else all.
 
     Attributes
     ----------
@@ -38,6 +38,10 @@ class Batch:
     first_row: int
     times: NDArray[np.int64] | None
     values: NDArray[Any]
+
+
+Fetched: TypeAlias = Callable[[], Iterator[Batch]]
+"""A row group whose stored bytes are in memory for as long as this is held; calling it decodes them, once."""
 
 
 class ByteSource(Protocol):
@@ -63,20 +67,29 @@ class Reader(Protocol):
         """
         ...
 
-    def batches(
+    def fetched(
         self, store: ByteSource, shard: Shard, first_group: int, stop_group: int, channels: Sequence[str]
-    ) -> Iterator[Batch]:
-        """Yield one batch per row group ``first_group <= g < stop_group``, rows as ``channels`` are ordered.
+    ) -> Iterator[Fetched]:
+        """Yield the row groups ``first_group <= g < stop_group`` in order, rows as ``channels`` are ordered.
+
+        A step of the iterator asks the store and decodes nothing; a call of what it yields decodes and asks nothing,
+        so that the one may go on while the other is waited for.
 
         Raises
         ------
         ShardRefused
-            When a row group cannot be decoded, or holds less or other than was described.
+            When a row group cannot be fetched or decoded, or holds less or other than was described.
         """
         ...
 
+    def batches(
+        self, store: ByteSource, shard: Shard, first_group: int, stop_group: int, channels: Sequence[str]
+    ) -> Iterator[Batch]:
+        """Yield the batches of the same row groups, fetched and decoded one after the other."""
+        ...
+
     def group_peak_bytes(self, group: RowGroup) -> int:
-        """Return an upper bound of the private bytes held while one row group is read, its batch included."""
+        """Return an upper bound of the private bytes held while one row group is read, its batches included."""
         ...
 
 
@@ -88,6 +101,15 @@ def group_peak_bytes(group: RowGroup) -> int:
     one comes on top.
     """
     return group.stored_bytes + group.decoded_bytes + SCRATCH_BYTES
+
+
+def one_by_one(groups: Iterator[Fetched]) -> Iterator[Batch]:
+    """Yield the batches of all row groups; no stored bytes are held while the next are fetched."""
+    for fetched in groups:
+        batches = fetched()
+        del fetched
+        yield from batches
+        del batches
 
 
 def refused(info: ObjectInfo, what: str, *, place: str = "", **parts: str) -> ShardRefused:

@@ -17,6 +17,7 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 
+from shardfold.errors import ShardRefused
 from shardfold.ids import ObjectInfo
 from shardfold.readers.batch import ByteSource, refused
 
@@ -25,7 +26,7 @@ TAIL_BYTES = 64 * 2**10
 GAP_BYTES = 2**20
 # Measured: smaller slices cost time, larger ones memory (pyarrow holds several times a slice while it decodes one).
 SLICE_BYTES = 2**19
-_TRAILER_BYTES = 8
+_TRAILER_BYTES, _SIGNATURE_BYTES = 8, 28
 _REFETCH = "copy the shard again from where it was made"
 
 
@@ -78,11 +79,12 @@ def read_footer(store: ByteSource, info: ObjectInfo) -> Footer:
         tail = memoryview(store.read(info.key, version=info.version, start=start, stop=info.size))
     with refusing(info, "the footer cannot be read"):
         metadata = pq.read_metadata(pa.BufferReader(tail[-(footer_bytes + _TRAILER_BYTES) :]))
+        _is_whole(info, metadata, footer_bytes)
         schema = metadata.schema.to_arrow_schema()
+        leaves = _leaves(info, schema, metadata)
         rows = tuple(metadata.row_group(group).num_rows for group in range(metadata.num_row_groups))
     first_rows = tuple(accumulate(rows, initial=0))[:-1]
-    body_stop = info.size - footer_bytes - _TRAILER_BYTES
-    return Footer(info, metadata, schema, _leaves(info, schema, metadata), rows, first_rows, body_stop)
+    return Footer(info, metadata, schema, leaves, rows, first_rows, info.size - footer_bytes - _TRAILER_BYTES)
 
 
 def chunk_span(footer: Footer, group: int, leaf: int) -> Span:
@@ -102,6 +104,10 @@ def chunk_span(footer: Footer, group: int, leaf: int) -> Span:
         got = f"bytes {start} to {stop} of a body that ends at {footer.body_stop}"
         place = f"row group {group}, column {chunk.path_in_schema}"
         raise refused(footer.info, "the footer points outside the file", place=place, got=got, remedy=_REFETCH)
+    if chunk.num_values < footer.rows[group]:
+        place = f"row group {group}, column {chunk.path_in_schema}"
+        rule, got = f"one value or more for each of {footer.rows[group]} rows", str(chunk.num_values)
+        raise refused(footer.info, "the footer contradicts itself", place=place, rule=rule, got=got, remedy=_REFETCH)
     return Span(start, stop)
 
 
@@ -240,7 +246,7 @@ def _may_have_nulls(footer: Footer, group: int, leaf: int) -> bool:
 def _footer_bytes(info: ObjectInfo, tail: memoryview) -> int:
     magic = bytes(tail[-4:])
     if magic == b"PARE":
-        raise refused(info, "the shard is encrypted", rule="Parquet without encryption", remedy="store it decrypted")
+        raise _encrypted(info)
     if len(tail) < 12 or magic != b"PAR1":
         rule = "a Parquet file ends in PAR1"
         got = f"{info.size} bytes that end in {magic!r}"
@@ -250,6 +256,26 @@ def _footer_bytes(info: ObjectInfo, tail: memoryview) -> int:
         got = f"a footer of {length} bytes in {info.size}"
         raise refused(info, "the footer is longer than the file", got=got, remedy=_REFETCH)
     return length
+
+
+def _is_whole(info: ObjectInfo, metadata: Any, footer_bytes: int) -> None:
+    """A plain footer over encrypted columns is followed by a signature; pyarrow ends the process over such columns."""
+    rest = footer_bytes - metadata.serialized_size
+    if rest == _SIGNATURE_BYTES:
+        raise _encrypted(info)
+    if rest:
+        got = f"{rest} bytes after it"
+        raise refused(info, "the footer ends early", rule="a footer as long as it says", got=got, remedy=_REFETCH)
+
+
+def _encrypted(info: ObjectInfo) -> ShardRefused:
+    return refused(
+        info,
+        "the shard is encrypted",
+        rule="Parquet without encryption",
+        got="an encrypted or signed footer",
+        remedy="write it again without encryption, or leave it out with source.match",
+    )
 
 
 def _leaves(info: ObjectInfo, schema: Any, metadata: Any) -> tuple[range, ...]:

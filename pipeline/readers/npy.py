@@ -8,8 +8,10 @@ from __future__ import annotations
 
 import io
 import math
+import tokenize
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -18,7 +20,7 @@ from numpy.typing import NDArray
 
 from shardfold.channels import keep_names
 from shardfold.ids import ObjectInfo, RowGroup, Shard
-from shardfold.readers.batch import SCRATCH_BYTES, Batch, ByteSource, refused
+from shardfold.readers.batch import SCRATCH_BYTES, Batch, ByteSource, Fetched, one_by_one, refused
 from shardfold.readers.times import Grid, TimeRule, grid_of
 from shardfold.readers.vector import channel_names, places
 
@@ -79,6 +81,12 @@ class NpyReader:
         self, store: ByteSource, shard: Shard, first_group: int, stop_group: int, channels: Sequence[str]
     ) -> Iterator[Batch]:
         """Yield the batches of some row groups; see `Reader`."""
+        return one_by_one(self.fetched(store, shard, first_group, stop_group, channels))
+
+    def fetched(
+        self, store: ByteSource, shard: Shard, first_group: int, stop_group: int, channels: Sequence[str]
+    ) -> Iterator[Fetched]:
+        """Yield some row groups as they are fetched, which leaves nothing to decode; see `Reader`."""
         header = read_header(store, shard.info, self.orient)
         wanted = places(self._all_names(header), channels)
         grid = grid_of(self.time, shard.info, header.samples)
@@ -86,10 +94,11 @@ class NpyReader:
             first_row = group * header.group_rows
             rows = min(header.group_rows, header.samples - first_row)
             times = grid.times(first_row, rows) if grid else None
+            # No name is given to the values here, lest they be held while the next are fetched.
             if header.sample_major:
-                yield Batch(first_row, times, _sample_major(store, header, first_row, rows, wanted))
+                yield _decoded(Batch(first_row, times, _sample_major(store, header, first_row, rows, wanted)))
             else:
-                yield Batch(first_row, times, _channel_major(store, header, wanted))
+                yield _decoded(Batch(first_row, times, _channel_major(store, header, wanted)))
 
     def group_peak_bytes(self, group: RowGroup) -> int:
         """Return an upper bound of the private bytes held while one row group is read: its values and one part."""
@@ -97,6 +106,10 @@ class NpyReader:
 
     def _all_names(self, header: Header) -> tuple[str, ...]:
         return channel_names(header.info, header.channels, self.names)
+
+
+def _decoded(batch: Batch) -> Fetched:
+    return partial(iter, (batch,))
 
 
 def read_header(store: ByteSource, info: ObjectInfo, orient: str) -> Header:
@@ -131,8 +144,8 @@ def _parse(info: ObjectInfo, head: bytes) -> tuple[tuple[int, ...], bool, np.dty
         version = npy_format.read_magic(stream)
         parse = {(1, 0): npy_format.read_array_header_1_0, (2, 0): npy_format.read_array_header_2_0}[version]
         shape, fortran, dtype = parse(stream, max_header_size=HEAD_BYTES)
-    except (ValueError, KeyError) as error:
-        got = str(error).splitlines()[0]
+    except (ValueError, KeyError, TypeError, SyntaxError, tokenize.TokenError) as error:
+        got = (str(error) or type(error).__name__).splitlines()[0]
         raise refused(info, "the .npy header cannot be read", rule=_RULE, got=got) from error
     return shape, fortran, dtype, stream.tell()
 

@@ -8,13 +8,22 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from functools import partial
 from typing import Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from shardfold.ids import ObjectInfo, RowGroup, Shard
-from shardfold.readers.batch import Batch, ByteSource, group_peak_bytes, refused, some_names
+from shardfold.readers.batch import (
+    Batch,
+    ByteSource,
+    Fetched,
+    group_peak_bytes,
+    one_by_one,
+    refused,
+    some_names,
+)
 from shardfold.readers.columns import Columns
 from shardfold.readers.footer import Footer, open_group, read_footer, refusing, slices, spans_to_read
 from shardfold.readers.times import (
@@ -41,8 +50,8 @@ class Layout(Protocol):
 
     def values(
         self, reader: Any, footer: Footer, group: int, columns: Columns, channels: Sequence[str]
-    ) -> NDArray[Any]:
-        """Return one row group's ``(m, n)`` values, rows as ``channels`` are ordered."""
+    ) -> Iterator[NDArray[Any]]:
+        """Yield one row group's values ``(m, some samples)``, rows as ``channels`` are ordered."""
         ...
 
 
@@ -59,15 +68,24 @@ class ParquetReader:
         groups = tuple(_describe_group(store, shard, group) for group in range(len(shard.footer.rows)))
         return Shard(info, groups, shard.columns.channels, str(shard.columns.dtype), shard.zoned)
 
+    def fetched(
+        self, store: ByteSource, shard: Shard, first_group: int, stop_group: int, channels: Sequence[str]
+    ) -> Iterator[Fetched]:
+        """Yield some row groups as they are fetched; see `Reader`."""
+        opened = self._open(store, shard.info)
+        _same_as_described(opened.footer, shard)
+        needed = opened.needed(opened.columns.leaves_of(channels))
+        for group in range(first_group, stop_group):
+            if shard.groups[group].rows:
+                decode = partial(self._decode, opened, group, shard.groups[group], channels)
+                # No name is given to the stored bytes here, lest they be held while the next are fetched.
+                yield partial(decode, open_group(store, opened.footer, group, needed))
+
     def batches(
         self, store: ByteSource, shard: Shard, first_group: int, stop_group: int, channels: Sequence[str]
     ) -> Iterator[Batch]:
         """Yield the batches of some row groups; see `Reader`."""
-        opened = self._open(store, shard.info)
-        _same_as_described(opened.footer, shard)
-        for group in range(first_group, stop_group):
-            if shard.groups[group].rows:
-                yield self._batch(store, opened, group, shard.groups[group], channels)
+        return one_by_one(self.fetched(store, shard, first_group, stop_group, channels))
 
     def group_peak_bytes(self, group: RowGroup) -> int:
         """Return an upper bound of the private bytes held while one row group is read."""
@@ -82,18 +100,22 @@ class ParquetReader:
             columns = self.layout.find(footer, time_field)
         return _Opened(footer, columns, time_field, grid_of(self.time, info, sum(footer.rows)))
 
-    def _batch(
-        self, store: ByteSource, opened: _Opened, group: int, described: RowGroup, channels: Sequence[str]
-    ) -> Batch:
-        footer, columns = opened.footer, opened.columns
-        reader = open_group(store, footer, group, opened.needed(columns.leaves_of(channels)))
-        times = None
+    def _decode(
+        self, opened: _Opened, group: int, described: RowGroup, channels: Sequence[str], reader: Any
+    ) -> Iterator[Batch]:
+        footer, times = opened.footer, None
         if opened.grid:
             times = opened.grid.times(footer.first_rows[group], footer.rows[group])
         elif opened.time_field is not None:
             times = _read_times(reader, footer, group, opened.time_field)
             _within_described(footer.info, group, times, described)
-        return Batch(footer.first_rows[group], times, self.layout.values(reader, footer, group, columns, channels))
+        parts = self.layout.values(reader, footer, group, opened.columns, channels)
+        del reader  # a layout that needs the stored bytes no more can let them go
+        done = 0
+        for values in parts:
+            rows = slice(done, done + values.shape[1])
+            yield Batch(footer.first_rows[group] + done, None if times is None else times[rows], values)
+            done = rows.stop
 
 
 @dataclass(frozen=True)

@@ -1,13 +1,13 @@
 """Layout ``vector``: one list of values per row, all of one length; channels are places in the list.
 
-Lists are decoded a slice of rows at a time into one sample-major array. Taking the row group at once would need
-no copy, but pyarrow then holds 2.1 to 4.2 times its decoded bytes (levels, growing buffers) and is no faster.
+Lists are decoded and handed on a slice of rows at a time, as pyarrow's own memory where all channels are taken. A row
+group at once would make pyarrow hold 2.1 to 4.2 times its decoded bytes (levels, growing buffers) and is no faster.
 """
 
 from __future__ import annotations
 
 import functools
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -48,18 +48,16 @@ class Vector:
 
     def values(
         self, reader: Any, footer: Footer, group: int, columns: Columns, channels: Sequence[str]
-    ) -> NDArray[Any]:
-        """Return one row group's values, F order: the transpose of rows as stored."""
+    ) -> Iterator[NDArray[Any]]:
+        """Yield one row group's values slice by slice, F order: the transpose of rows as stored."""
         leaf = columns.leaves[0]
         names = self._all_names(footer, leaf, footer.schema.field(self.values_column).type)
         picks = None if tuple(channels) == names else places(names, channels)
-        values = np.empty((footer.rows[group], len(channels)), columns.dtype)
         done = 0
         for batch in slices(reader, footer, group, (leaf,), len(names) * columns.dtype.itemsize):
-            block = _block(footer, group, done, batch.column(0), len(names), values.dtype)
-            values[done : done + len(block)] = block if picks is None else block[:, picks]
+            block = _block(footer, group, done, batch.column(0), len(names), columns.dtype)
+            yield (block if picks is None else np.take(block, picks, axis=1)).T
             done += len(block)
-        return values.T
 
     def _all_names(self, footer: Footer, leaf: int, kind: Any) -> tuple[str, ...]:
         length = kind.list_size if pa.types.is_fixed_size_list(kind) else _common_length(footer, leaf)
@@ -102,7 +100,7 @@ def _block(footer: Footer, group: int, done: int, lists: Any, length: int, dtype
         place, got = f"row group {group}", f"{flat.null_count} nulls"
         raise refused(footer.info, "values are missing", place=place, rule="none, says the footer", got=got)
     numbers: NDArray[Any] = flat.to_numpy(zero_copy_only=False)
-    return numbers.reshape(-1, length)
+    return numbers.astype(dtype, copy=False).reshape(-1, length)
 
 
 def _is_list(kind: Any) -> bool:

@@ -5,7 +5,7 @@ Columns are decoded a few at a time into one channel-major array, so that only t
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -44,8 +44,8 @@ class Wide:
 
     def values(
         self, reader: Any, footer: Footer, group: int, columns: Columns, channels: Sequence[str]
-    ) -> NDArray[Any]:
-        """Return one row group's values, C order."""
+    ) -> Iterator[NDArray[Any]]:
+        """Yield one row group's values at once, C order; its stored bytes are let go before."""
         rows = footer.rows[group]
         values = np.empty((len(channels), rows), columns.dtype)
         leaves = columns.leaves_of(channels)
@@ -53,7 +53,8 @@ class Wide:
         for first in range(0, len(channels), step):
             some = slice(first, first + step)
             _fill(reader, footer, group, leaves[some], channels[some], values[some])
-        return values
+        del reader
+        yield values
 
 
 def _all_numeric(footer: Footer, dtypes: dict[str, np.dtype[Any] | None]) -> None:

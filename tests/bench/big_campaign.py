@@ -62,7 +62,7 @@ class Campaign:
         """Return the ``source`` block of a job."""
         keys = f"location: {location}, storage: {{endpoint: '{endpoint}', region: us-east-1}}, settle: 0 s"
         if self.layout == "array":
-            time = rf"{{from_name: 'at-(\d+)\.npy', step: {STEP_NS // 1000} us}}"
+            time = rf"{{from_name: 'at-(?P<nanoseconds>\d+)', step: {STEP_NS // 1000} us}}"
             return f"{{{keys}, layout: array, match: '**/*.npy', orient: {self.orient}, time: {time}}}"
         return f"{{{keys}, layout: {self.layout}, time: t{', values: v' if self.layout == 'vector' else ''}}}"
 

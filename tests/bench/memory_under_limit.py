@@ -104,7 +104,7 @@ def _measure(job: Job, workers: int) -> tuple[Peaks, float]:
 
 def _plan(job: Job, workers: int) -> budget.Budget:
     """Return the plan of the run just made."""
-    site = look(job, lambda event: None, write=False)
+    site = look(job, lambda event: None)
     design = site.dossier.design
     shape = design.shape(1, design.width)
     cells = cut(list(site.shards.values()), design, 1, shape, "").cells

@@ -358,7 +358,11 @@ TIME_COLUMNS = {
     "date32": (pa.array([2, 0, 1, 3], pa.date32()), 86_400 * 10**9 * np.array([2, 0, 1, 3]), False),
     "date64": (pa.array([0, 86_400_000, 0, 1], pa.date64()), 86_400 * 10**9 * np.array([0, 1, 0, 0]), False),
     "integer seconds": (pa.array([SECONDS, -1, 7, 0]), 10**9 * np.array([SECONDS, -1, 7, 0]), False),
-    "unsigned seconds": (pa.array([3_000_000_000, 1, 2, 3], pa.uint32()), 10**9 * np.array([3 * 10**9, 1, 2, 3]), False),
+    "unsigned seconds": (
+        pa.array([3_000_000_000, 1, 2, 3], pa.uint32()),
+        10**9 * np.array([3 * 10**9, 1, 2, 3]),
+        False,
+    ),
     "floating seconds": (pa.array([0.125, -0.5, 1e-9, 2.5e-9]), np.array([125_000_000, -500_000_000, 1, 2]), False),
     "float32 seconds": (pa.array([0.5, 0.25, 1.0, 2.0], pa.float32()), 250_000_000 * np.array([2, 1, 4, 8]), False),
 }

@@ -9,10 +9,12 @@ import os
 import pickle
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
+from dataclasses import replace
 from pathlib import Path
 
 import fsspec
 import pytest
+from conftest import Bucket
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
@@ -29,8 +31,14 @@ def place(request: pytest.FixtureRequest, tmp_path: Path) -> StoreSettings:
     if request.param == "local":
         (tmp_path / "root").mkdir()
         return StoreSettings(str(tmp_path / "root"))
-    bucket = request.getfixturevalue("bucket")
-    return StoreSettings(f"{bucket.location}/root", bucket.endpoint)
+    folder = request.getfixturevalue("folder")
+    return StoreSettings(f"{folder.location}/root", folder.endpoint)
+
+
+@pytest.fixture
+def missing(place: StoreSettings) -> StoreSettings:
+    """Settings of a folder or bucket that is not there."""
+    return replace(place, location="s3://no-such-bucket/root" if place.endpoint else f"{place.location}/none")
 
 
 @pytest.fixture
@@ -213,11 +221,26 @@ def test_a_writable_store_proves_it_and_leaves_nothing(store: Counting) -> None:
     assert store.snapshot() == before
 
 
-def test_a_missing_root_is_said(place: StoreSettings) -> None:
-    missing = f"{place.location}-none" if place.endpoint is None else f"{place.location.removesuffix('/root')}-no/root"
-    store = open_store(missing, place.endpoint)
+def test_a_missing_root_is_said(missing: StoreSettings) -> None:
+    store = open_store(missing.location, missing.endpoint)
     with pytest.raises(NothingToRead, match="no such"):
         list(store.list())
+    with pytest.raises(NothingToRead, match="no such"):
+        store.read("k")
+
+
+def test_a_missing_bucket_is_never_made(folder: Bucket) -> None:
+    for write in ("put", "create", "check_writable"):
+        store = open_store("s3://no-such-bucket/root", folder.endpoint)
+        with pytest.raises(NothingToRead, match="no such bucket"):
+            getattr(store, write)(*(() if write == "check_writable" else ("k", b"x")))
+    with pytest.raises(NothingToRead, match="no such bucket"):
+        store.head("k")
+
+
+def test_a_missing_local_folder_is_made_by_the_first_object(tmp_path: Path) -> None:
+    open_store(str(tmp_path / "new" / "root")).check_writable()
+    assert list(open_store(str(tmp_path / "new" / "root")).list()) == []
 
 
 def test_counts_are_what_went_through(store: Counting, small_cuts: int) -> None:

@@ -18,10 +18,10 @@ HERTZ = 1e9 / STEP_NS
 
 
 class Shore:
-    """A campaign and a dossier in one bucket."""
+    """A campaign and a dossier side by side in object storage."""
 
-    def __init__(self, bucket: Any) -> None:
-        self._place, self._endpoint = bucket.location, bucket.endpoint
+    def __init__(self, folder: Any) -> None:
+        self._place, self._endpoint = folder.location, folder.endpoint
         self.campaign = open_store(f"{self._place}/campaign", self._endpoint)
 
     def run(self, layout: str, rank: int, modes: dict[str, Any] | None = None, **blocks: dict[str, Any]) -> Found:
@@ -31,8 +31,8 @@ class Shore:
 
 
 @pytest.fixture
-def shore(bucket: Any) -> Shore:
-    return Shore(bucket)
+def shore(folder: Any) -> Shore:
+    return Shore(folder)
 
 
 def sines(found: np.ndarray, exact: np.ndarray) -> np.ndarray:

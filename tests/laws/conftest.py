@@ -78,11 +78,14 @@ class Lab:
         ]
         return Folded(summary, blocks, probe, keys)
 
-    def distance(self, a: Summary, b: Summary) -> float:
-        """Return the largest difference of two summaries, each product in units of the energies behind it."""
+    def distance(self, a: Summary, b: Summary, least: float = 0.0) -> float:
+        """Return the largest difference of two summaries, each product in units of the energies behind it.
+
+        ``least`` is the smallest root of an energy to measure by, for blocks that happen to be nearly still.
+        """
         left = np.sqrt(np.maximum(a.energy, 1e-300))
         right = np.sqrt(np.maximum(np.diagonal(a.inner), 1e-300))
-        size_left, size_right = np.linalg.norm(left), np.linalg.norm(right)
+        size_left, size_right = max(np.linalg.norm(left), least), max(np.linalg.norm(right), least)
         root = np.sqrt(max(a.n, 1))
         return max(
             np.linalg.norm(a.outer - b.outer) / (size_left * size_right),

@@ -84,6 +84,24 @@ def test_coefficients() -> None:
     assert measured <= cost.coefficients_bytes(10, 64, 4096) <= 2 * measured
 
 
+def test_next_probe() -> None:
+    arguments = ready(3000, 300, 64, "float32", "C")
+    summary = arguments[0]
+    fold_block(*arguments)
+    measured = peak_bytes(lambda: factors.next_probe(summary, 10, 1, 2, np.arange(3000)))
+    assert measured <= cost.next_probe_bytes(summary.shape, 10) <= 2 * measured
+
+
+@pytest.mark.parametrize("order", ["C", "F"])
+def test_direct_coefficients(order: Any) -> None:
+    arguments = ready(120, 4096, None, "float32", order)
+    summary, raw, preparation = arguments[:3]
+    fold_block(*arguments)
+    made = factors.finish(summary)
+    measured = peak_bytes(lambda: factors.direct_coefficients(made, 10, raw, preparation, summary.mean))
+    assert measured <= cost.direct_coefficients_bytes(10, 120, 4096) <= 2 * measured
+
+
 @pytest.mark.parametrize(
     ("channels", "samples"),
     [(1, 4096), (100, 4096), (512, 4096), (513, 2048), (8000, 256), (32768, 64), (1_000_000, 64)],
