@@ -22,6 +22,7 @@ from .comoments import keep_mean as with_mean_kept
 Floats = NDArray[np.float64]
 
 EPS = float(np.finfo(np.float64).eps)
+DIRECTION_ULPS = 64  # directions of W this close to rounding (measured: up to 5 eps) point nowhere
 ROW_SPACE_FLOOR = 1e-13  # least eigenvalue of the scaled C that still counts as a direction, relative to the largest
 FLOOR_ULPS = 4  # spurious eigenvalues were measured up to 2.6 eps of the energy, with and without offsets
 PEAK_SHARE = 0.9  # the first channel this close to the largest decides the sign
@@ -294,10 +295,14 @@ def _inverse_root_diagonal(c: Floats) -> Floats:
 
 
 def _leading_directions(summary: Summary) -> Floats:
-    """Return orthonormal rows that span the scaled W, strongest first, by pivoted QR."""
+    """Return orthonormal rows that span the scaled W, strongest first, by pivoted QR.
+
+    Rows along directions of rounding would spoil coefficients: X along them is small, is scaled up by the finish, and
+    holds rounding alone (rank 2, second read: coefficients off by 1e-8 with them, by 1e-15 without).
+    """
     x = summary.shape.x
     scaled = summary.outer[:, x] * _inverse_root_diagonal(summary.inner[x, x])
     q, r, _ = scipy.linalg.qr(scaled, mode="economic", pivoting=True)
     size = np.abs(np.diagonal(r))
-    directions: Floats = np.asarray(q[:, size > EPS * size.max(initial=0.0)].T, dtype=np.float64)
+    directions: Floats = np.asarray(q[:, size > DIRECTION_ULPS * EPS * size.max(initial=0.0)].T, dtype=np.float64)
     return directions

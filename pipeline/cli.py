@@ -23,7 +23,7 @@ from rich.table import Table
 
 from shardfold import demo as demonstration
 from shardfold.budget import MIB
-from shardfold.errors import InputError, ShardfoldError, Stopped
+from shardfold.errors import InputError, JobInvalid, ShardfoldError, Stopped
 from shardfold.executor import Executor, SerialExecutor
 from shardfold.forecast import forecast
 from shardfold.job import Job, load_job
@@ -41,7 +41,7 @@ REFUSED_STATUS = 3
 def _common(function: F) -> F:
     for option in (
         click.option("--json", "as_json", is_flag=True, help="One JSON document on standard output."),
-        click.option("--quiet", is_flag=True, help="No progress, no notes."),
+        click.option("--quiet", is_flag=True, help="No progress, no notes; refused shards and errors are told."),
     ):
         function = option(function)
     return function
@@ -71,19 +71,15 @@ def check_command(
 ) -> None:
     """Say what a run would do; read no measured value."""
     settings = load_job(job, overrides, endpoint)
-    with Teller(quiet or as_json) as teller:
+    with Teller(quiet) as teller:
         found = forecast(settings, _planned_workers(settings), teller)
     if as_json:
-        _emit(found.figures)
+        _emit(found.figures | ({} if found.refusal is None else _error_document(found.refusal)))
     else:
         _print_forecast(found.figures)
-    if found.refused:
-        raise InputError(
-            "a run would be refused",
-            where="engine.memory",
-            got=found.refused,
-            remedy="raise engine.memory, or see what weighs most above",
-        )
+    if found.refusal is not None:
+        click.echo(f"shardfold: a run would be refused: {found.refusal}", err=True)
+        sys.exit(found.refusal.exit_status)
 
 
 @commands.command("run")
@@ -92,7 +88,7 @@ def check_command(
 def run_command(job: Path, overrides: tuple[str, ...], endpoint: str | None, as_json: bool, quiet: bool) -> None:
     """Do what is outstanding, and only that. Safe to repeat, to kill, to start twice."""
     settings = load_job(job, overrides, endpoint)
-    with Teller(quiet or as_json) as teller:
+    with Teller(quiet) as teller:
         report = run(settings, lambda: make_executor(settings), teller)
     if as_json:
         _emit(asdict(report))
@@ -121,7 +117,7 @@ def show_command(result: str, endpoint: str | None, as_json: bool, quiet: bool) 
 @_common
 def demo_command(folder: Path, s3: bool, as_json: bool, quiet: bool) -> None:
     """Write the Tarnmoor footbridge campaign into FOLDER, run it, and say how close the modes came."""
-    with demonstration.stage(folder, s3) as scene, Teller(quiet or as_json) as teller:
+    with demonstration.stage(folder, s3) as scene, Teller(quiet) as teller:
         settings = load_job(scene.job, ())
         report = run(settings, lambda: make_executor(settings), teller)
         found = open_result(report.location, scene.endpoint)
@@ -169,14 +165,16 @@ def _status(arguments: list[str] | None) -> int:
     signal.signal(signal.SIGTERM, _stop)
     as_json = "--json" in (sys.argv[1:] if arguments is None else arguments)
     try:
-        commands.main(args=arguments, standalone_mode=False)
+        commands.main(args=arguments, prog_name="shardfold", standalone_mode=False)
     except SystemExit as end:
         return int(end.code or 0)
     except click.exceptions.Exit as end:
         return end.exit_code
     except click.ClickException as error:
         error.show()
-        return 2
+        if as_json:
+            _emit(_error_document(InputError(error.format_message())))
+        return InputError.exit_status
     except (KeyboardInterrupt, click.Abort):
         return _fail(_stopped(signal.SIGINT), as_json)
     except ShardfoldError as error:
@@ -191,9 +189,13 @@ def _status(arguments: list[str] | None) -> int:
 def _fail(error: ShardfoldError, as_json: bool) -> int:
     click.echo(f"shardfold: {error}", err=True)
     if as_json:
-        faults = {"faults": list(error.faults)} if hasattr(error, "faults") else {}
-        _emit({"error": {**error.as_record(), **faults, "exit_status": error.exit_status}})
+        _emit(_error_document(error))
     return error.exit_status
+
+
+def _error_document(error: ShardfoldError) -> dict[str, Any]:
+    faults = {"faults": list(error.faults)} if isinstance(error, JobInvalid) else {}
+    return {"error": {**error.as_record(), **faults, "exit_status": error.exit_status}}
 
 
 def _stop(number: int, frame: FrameType | None) -> None:

@@ -19,6 +19,7 @@ from shardfold.job import Job
 from shardfold.kernels.addressed import GENERATOR_VERSION
 from shardfold.kernels.cost import block_samples
 from shardfold.kernels.whole import Shape, stored_dtype
+from shardfold.quantities import format_duration
 
 FORMAT = 1
 KERNEL_VERSION = 1
@@ -51,8 +52,10 @@ class Design:
         Rows k of the probe; equal to the number of channels where ``identity``.
     identity : bool
         The probe is the identity (few channels): nothing is lost, coefficients are read again.
-    channels_request, table_digest : str
-        Digests of what the job said of channels, and of the stored table.
+    channels_request : str
+        What the job said of channels, in words.
+    table_digest : str
+        Digest of the stored table.
     """
 
     campaign: str
@@ -173,14 +176,14 @@ def compare(stored: Design, job: Job, channels_request: str, bytes_to_read: int)
         wanted = stored.channels if 2 * int(job.design.width) >= stored.channels else job.design.width
         asked["design.width"] = (stored.width, wanted)
     if job.design.leaf != "auto" and stored.timed:
-        asked["design.leaf"] = (f"{stored.leaf_ns} ns", f"{job.design.leaf} ns")
+        asked["design.leaf"] = (format_duration(stored.leaf_ns), format_duration(int(job.design.leaf)))
     differing = {key: pair for key, pair in asked.items() if pair[0] != pair[1]}
     if differing:
         raise DesignDiffers(
             "the job's design is not the one this dossier was created with",
             where=", ".join(differing),
-            rule="a dossier keeps its design; stored: " + "; ".join(f"{key}: {a}" for key, (a, _) in differing.items()),
-            got="asked: " + "; ".join(f"{key}: {b}" for key, (_, b) in differing.items()),
+            rule="a dossier keeps its design",
+            got="; ".join(f"{key}: stored ({a}), asked ({b})" for key, (a, b) in differing.items()),
             remedy=f"go back to the stored values, or name a new dossier.location, which reads "
             f"{bytes_to_read:,} bytes of the campaign again",
         )

@@ -18,7 +18,7 @@ from shardfold import layout
 from shardfold.channels import ChannelTable, default_table, read_table, to_arrow, units_conflict
 from shardfold.design import Design, compare, resolve
 from shardfold.errors import InputError, RecordCorrupt
-from shardfold.ids import canonical_json, digest_bytes, digest_value
+from shardfold.ids import canonical_json, digest_bytes
 from shardfold.inventory import Inventory, choose_channels
 from shardfold.job import Job
 from shardfold.kernels.addressed import STREAM_PROBE, name_keys, signs
@@ -113,9 +113,11 @@ def create(wanted: Dossier) -> Dossier:
 
 
 def channel_request(job: Job, table: ChannelTable | None) -> str:
-    """Return the digest of what the job says of channels, for comparing without an inventory."""
-    content = None if table is None else digest_bytes(table_bytes(table))
-    return digest_value([job.source.channels.include, job.source.channels.exclude, content])
+    """Return what the job says of channels in words, for comparing without an inventory."""
+    asked = job.source.channels
+    include = "all" if asked.include is None else json.dumps(asked.include)
+    content = "no table" if table is None else f"a table of digest {digest_bytes(table_bytes(table))}"
+    return f"include {include}, exclude {json.dumps(asked.exclude)}, {content}"
 
 
 def load_job_table(job: Job) -> ChannelTable | None:

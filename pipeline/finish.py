@@ -186,11 +186,11 @@ def _unit(dossier: Dossier) -> str:
 
 def _nothing_varies(summary: Summary, keep_mean: bool) -> InputError:
     about = "zero" if keep_mean else "the mean of each channel"
-    why = "there is one sample only" if summary.n == 1 else "every channel is constant to rounding"
+    got = "one sample only" if summary.n == 1 else f"{summary.n:,} samples; every channel is constant to rounding"
     return InputError(
         "there is nothing to decompose",
         where="the campaign",
         rule=f"values that vary about {about}",
-        got=f"{summary.n} samples; {why}",
-        remedy="see that the right column and time span are read; 'modes.remove: []' keeps the mean",
+        got=got,
+        remedy="see that the right columns are read" + ("" if keep_mean else "; 'modes.remove: []' keeps the mean"),
     )

@@ -14,12 +14,13 @@ from shardfold.blas import core_type, one_thread
 from shardfold.errors import InputError
 from shardfold.events import Listener
 from shardfold.gather import moment
-from shardfold.ingest import found_in, nothing_left, refusal_of
 from shardfold.job import Job
 from shardfold.kernels import cost
 from shardfold.kernels.whole import Shape, stored_dtype
 from shardfold.ledger import Entry
 from shardfold.plan import Cell, bytes_to_read, cut, tree
+from shardfold.quantities import format_duration
+from shardfold.refusals import found_in, nothing_left, refusal_of
 from shardfold.run import check_rank, reads_of, shapes_of
 from shardfold.site import Site, look
 from shardfold.sums import leaf_names
@@ -73,7 +74,7 @@ def forecast(job: Job, workers: int, listen: Listener) -> Forecast:
         "channels": design.channels,
         "span": _span(site),
         "summary": _summary(design.identity, design.width, design.channels),
-        "leaf": f"{design.leaf_ns / 1e9:g} s" if design.timed else f"{1 << design.leaf_bits} by hash of the name",
+        "leaf": format_duration(design.leaf_ns) if design.timed else f"{1 << design.leaf_bits} by hash of the name",
         "cells": {"all": round(scale * len(cells)), "stored": sum(cell.name in stored for cell in cells)},
         "reads": _reads(cells, stored, reads, design.identity, scale),
         "work": _work(shapes, cells, stored, workers, scale),

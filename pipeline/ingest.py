@@ -6,15 +6,15 @@ the cells it shared are planned again without it, and the loop ends when a plan 
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field, replace
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, field
 from itertools import pairwise
 from typing import Any
 
 import numpy as np
 
 from shardfold import artifacts, layout
-from shardfold.errors import InputError, ShardRefused, WriterConflict, told
+from shardfold.errors import InputError, ShardRefused, WriterConflict
 from shardfold.events import Committed, Listener, Refused, StageDone, StageStarted, TaskDone
 from shardfold.executor import Executor
 from shardfold.gather import check_repeats
@@ -22,6 +22,7 @@ from shardfold.ids import Shard, digest_bytes
 from shardfold.kernels.whole import Shape
 from shardfold.ledger import Entry, Leaf, LeafState, Ledger, commit, difference, load
 from shardfold.plan import Cell, bytes_to_read, cut
+from shardfold.refusals import beside_vanished, message_of, nothing_left, refusal_of
 from shardfold.store import Store
 from shardfold.tasks import CellRead, ReadCell, Refusal, Workplace
 
@@ -79,21 +80,16 @@ class Intake:
         shard = self.shards.pop(key, None)
         if shard is None:
             return
-        entry = refusal_of(error, shard, self.under)
-        if rival not in ("", key):
-            version = {} if rival in self.absent else {"rival_version": self.version(rival)}
-            where = {} if key == error.shard else {"where": key}
-            entry = replace(entry, why={**entry.why, **where, "rival": rival, **version})
-        self.refuse(entry)
+        self.refuse(refusal_of(error, shard, self.under, self._rival_facts(rival) if rival != key else {}))
 
     def first_to_drop(self, error: ShardRefused) -> tuple[bool, bool, str]:
         """Sort refusals so that no shard is dropped for the sake of one that is dropped later."""
         neither_in = not (self.is_in(error.shard) or self.is_in(error.rival))
         return bool(error.rival), neither_in, error.shard
 
-    def version(self, key: str) -> str:
-        """Return the version of a shard that shall be in."""
-        return self.shards[key].info.version
+    def _rival_facts(self, key: str) -> dict[str, str]:
+        version = {"rival_version": self.shards[key].info.version} if key and key not in self.absent else {}
+        return {"rival": key, **version} if key else {}
 
     def refuse(self, entry: Entry) -> None:
         """Note a refusal and say it, once."""
@@ -128,7 +124,7 @@ def bring_in(intake: Intake, read: int, shape: Shape, probe_digest: str) -> tupl
         blocked = _blocked(intake, todo)
         refusals = blocked or _read(intake, read, shape, cells, todo)
         if not refusals:
-            refusals = _rivals(intake, read, cells)
+            refusals = list(_rivals(intake, read, cells).values())
         for error in sorted(refusals, key=intake.first_to_drop):
             if read > 1:
                 raise _changed_between_reads(error)
@@ -167,7 +163,10 @@ def _read(
         intake.listen(TaskDone(stage, outcome.bytes_read, _count_down(left, task.cell)))
         leaves_since += 1
         if leaves_since >= COMMIT_LEAVES or intake.clock() - last_commit >= COMMIT_SECONDS:
-            _commit(intake, read, _complete(cells, missing))
+            complete = _complete(cells, missing)
+            rivals = _rivals(intake, read, complete)
+            refusals += rivals.values()
+            _commit(intake, read, tuple(cell for cell in complete if cell.leaf not in rivals))
             last_commit, leaves_since = intake.clock(), 0
     intake.listen(StageDone(stage))
     return refusals
@@ -300,30 +299,18 @@ def _blocked(intake: Intake, todo: Sequence[Cell]) -> list[ShardRefused]:
                 got=f"{len(gone)} of them are not listed any more",
                 remedy="put the shard back under its name, or start a new dossier without it",
             )
-        refusals += [_beside_vanished(shard, gone[0]) for shard in new if gone]
+        refusals += [beside_vanished(shard, gone[0]) for shard in new if gone]
     return refusals
 
 
-def _beside_vanished(shard: Shard, gone: str) -> ShardRefused:
-    return ShardRefused(
-        "it shares a small cell with a shard that has vanished",
-        shard=shard.key,
-        version=shard.info.version,
-        rival=gone,
-        rule="to add it, all small shards of its leaf are read again",
-        got=f"{gone} is not listed any more",
-        remedy=f"put {gone} back under its name, then run again",
-    )
-
-
-def _rivals(intake: Intake, read: int, cells: Sequence[Cell]) -> list[ShardRefused]:
-    """Return refusals of shards that repeat a time of another cell of the same leaf."""
+def _rivals(intake: Intake, read: int, cells: Sequence[Cell]) -> dict[int, ShardRefused]:
+    """Return, by leaf, refusals of shards that repeat a time of another cell of the leaf; committed leaves have none."""
     if read > 1 or not intake.workplace.design.timed:
-        return []
+        return {}
     by_leaf: dict[int, list[Cell]] = {}
     for cell in cells:
         by_leaf.setdefault(cell.leaf, []).append(cell)
-    refusals = []
+    refusals = {}
     for leaf, group in by_leaf.items():
         before = intake.ledger.leaves.get((read, leaf))
         if len(group) < 2 or (before is not None and before.cells == tuple(cell.name for cell in group)):
@@ -340,7 +327,7 @@ def _rivals(intake: Intake, read: int, cells: Sequence[Cell]) -> list[ShardRefus
         try:
             check_repeats(np.concatenate(times), owners)
         except ShardRefused as error:
-            refusals.append(error)
+            refusals[leaf] = error
     return refusals
 
 
@@ -353,34 +340,6 @@ def _overlap(cells: Sequence[tuple[dict[str, Any], ...]]) -> bool:
             spans.append((min(firsts), max(lasts)))
     spans.sort()
     return any(later[0] <= earlier[1] for earlier, later in pairwise(spans))
-
-
-def message_of(entry: Entry) -> str:
-    """Return why a shard is refused: what, with the place within the shard, and a line each for the other parts."""
-    place = entry.why.get("where", "").removeprefix(entry.key).removeprefix(", ")
-    return told({**entry.why, "where": place})
-
-
-def refusal_of(error: ShardRefused, shard: Shard, under: str) -> Entry:
-    """Return what the ledger says of a shard that is refused."""
-    return Entry(shard.key, shard.info.version, "refused", under, shard, why=error.as_record())
-
-
-def nothing_left(refused: Mapping[str, Entry]) -> InputError:
-    """Return the error for a campaign of which every shard is refused."""
-    key, entry = min(refused.items())
-    return InputError(
-        "no shard can be taken in",
-        where=key,
-        rule=entry.why.get("rule", "at least one shard that can be trusted"),
-        got=f"{len(refused)} refused; the first: {found_in(entry)}",
-        remedy=entry.why.get("remedy", "see the reasons above"),
-    )
-
-
-def found_in(entry: Entry) -> str:
-    """Return in one line what is wrong with a refused shard, and the value that shows it."""
-    return "; got ".join(entry.why[part] for part in ("what", "got") if entry.why.get(part))
 
 
 def _changed_between_reads(error: ShardRefused) -> InputError:

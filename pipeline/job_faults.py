@@ -19,7 +19,7 @@ _SECRET_WORDS = (
 _SECRETS_OF_STORAGE = {"key", "keyid", "id", "user", "username", "pass", "pwd", "login", "auth"}
 _SECRET_VALUE = re.compile(
     r"""://[^/?\#\s]*@                                  # user:password@ before the host
-      | ://[^/:@\s]+:(?!\d+(?:/|$))[^@\s]*@              # the same with a slash in the password
+      | ://[^/:@\[\s]+:(?!\d*(?:/|$))                   # the same with a slash in the password, or without a host
       | (?<![A-Z0-9])(?:AKIA|ASIA)[0-9A-Z]{16}(?![A-Z0-9])  # an access key id
       | [?&](?:X-Amz-\w+|AWSAccessKeyId|Signature|sig|token|password|secret\w*)=
     """,

@@ -154,7 +154,7 @@ def _secret(path: tuple[str, ...], entry: Entry) -> Fault | None:
     if looks_secret(path):
         return Fault(entry.spot, key, "must not stand in a job", NOT_SHOWN, _CHAIN)
     if holds_secret(entry.written) or ("storage" in path and "@" in entry.written):
-        rule = "must not carry credentials, which would end in logs and manifests"
+        rule = "must not carry credentials such as user:password, which would end in logs and manifests"
         return Fault(entry.spot, key, rule, NOT_SHOWN, _CHAIN)
     if path[-1:] == ("profile",) and "storage" in path:
         return Fault(entry.spot, key, "must not stand in a job", remedy="set AWS_PROFILE in the environment")

@@ -18,6 +18,7 @@ from shardfold.ids import Shard, digest_value
 from shardfold.kernels.addressed import name_keys
 from shardfold.kernels.cost import summary_bytes
 from shardfold.kernels.whole import Shape
+from shardfold.quantities import format_duration
 
 TREE_BITS = 3
 """Each stored sum covers an aligned run of 2**3 children, summed in one task; the bits are those of the full tree."""
@@ -206,7 +207,7 @@ def _too_long(shard: Shard, span: int, leaf: int) -> ShardRefused:
         "one row group crosses more than one leaf edge, so it would be read more than twice",
         shard=shard.key,
         version=shard.info.version,
-        rule=f"a row group spans at most one leaf, {leaf / 1e9:g} s here",
-        got=f"a row group of {span / 1e9:g} s",
-        remedy=f"a dossier with design.leaf of at least {span / 1e9:g} s, or shards with shorter row groups",
+        rule=f"a row group is not longer than design.leaf, {format_duration(leaf)}",
+        got=f"a row group of {span / 1e9:.9g} s",
+        remedy=f"a dossier with design.leaf of at least {span / 1e9:.9g} s, or shards with shorter row groups",
     )

@@ -101,7 +101,7 @@ class Teller:
             self._task = self._bar.add_task(event.stage, total=event.tasks, note="")
         else:
             size = f", {_size(event.bytes_to_read)}" if event.bytes_to_read else ""
-            self._line(f"{event.stage}: {event.tasks} tasks{size}")
+            self._line(f"{event.stage}: {_count(event.tasks, 'task')}{size}")
 
     def _advance(self, event: TaskDone) -> None:
         self._done += 1
@@ -138,15 +138,20 @@ class Teller:
 
 def _sentence(event: Event) -> str:
     if isinstance(event, Found):
-        refused = f", {event.refused} refused" if event.refused else ""
-        return f"campaign: {event.shards} shards{refused}"
+        others = ((event.unsettled, "left for later"), (event.refused, "refused"))
+        counts = [_count(event.shards, "shard"), *(f"{count} {what}" for count, what in others if count)]
+        return f"campaign: {', '.join(counts)}"
     if isinstance(event, Noted):
         return f"note: {event.text}"
     if isinstance(event, Committed):
-        return f"ledger {event.number}: {event.shards} shards, {event.leaves} leaves"
+        return f"ledger {event.number}: {_count(event.shards, 'shard')}, {event.leaves} leaves"
     if isinstance(event, Published):
         return "" if event.new else "nothing new: the result stands as it was published"
     return ""
+
+
+def _count(count: int, what: str) -> str:
+    return f"{count:,} {what}{'' if count == 1 else 's'}"
 
 
 def _size(count: float) -> str:

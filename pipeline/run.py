@@ -24,12 +24,13 @@ from shardfold.executor import Executor
 from shardfold.finish import finding_of, too_few_samples, write_parts, write_probe
 from shardfold.gather import moment
 from shardfold.ids import digest_value
-from shardfold.ingest import Intake, bring_in, nothing_left
+from shardfold.ingest import Intake, bring_in
 from shardfold.job import Job
 from shardfold.kernels.factors import probe_width
 from shardfold.kernels.whole import Shape, Summary
 from shardfold.plan import Cell
 from shardfold.publish import manifest, put_all, quality, result_tables, seal, shards_digest
+from shardfold.refusals import nothing_left
 from shardfold.site import Site, look
 from shardfold.sums import add_all
 from shardfold.tasks import Outcome, Task, Workplace

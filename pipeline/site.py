@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import time
 import uuid
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -22,7 +22,10 @@ from shardfold.ids import Shard, digest_value
 from shardfold.inventory import Inventory, agree, take_inventory
 from shardfold.job import Job
 from shardfold.ledger import Entry, Ledger
+from shardfold.quantities import format_duration
 from shardfold.readers import reader_for
+from shardfold.readers.batch import some_names
+from shardfold.refusals import still_refused
 from shardfold.store import Store, StoreSettings, connect
 from shardfold.tasks import Workplace
 
@@ -124,22 +127,11 @@ def _sort_out(inventory: Inventory, state: Ledger, under: str) -> tuple[dict[str
         standing[refusal.key] = Entry(refusal.key, refusal.version, "refused", under, why=dict(refusal.error_record))
     for shard in inventory.shards:
         before = state.entry(shard.key, shard.info.version)
-        if before is not None and before.under == under and _still_refused(before, state, listed):
+        if before is not None and before.under == under and still_refused(before, state, listed):
             standing[shard.key] = before
         else:
             shards[shard.key] = shard
     return shards, standing
-
-
-def _still_refused(entry: Entry, state: Ledger, listed: Mapping[str, str]) -> bool:
-    """Return whether a refusal of an earlier run still holds: one for a rival's sake does while that is as it was."""
-    rival, version = entry.why.get("rival"), entry.why.get("rival_version")
-    if entry.state != "refused" or rival is None:
-        return entry.state == "refused"
-    if version is None or rival in listed:
-        return listed.get(rival) == version
-    kept = state.entry(rival, version)
-    return kept is not None and kept.state == "in"
 
 
 def _open(
@@ -149,7 +141,7 @@ def _open(
         raise InputError(
             "no shard is old enough to be taken in",
             where="source.settle",
-            rule=f"at least {job.source.settle_ns / 1e9:g} s old",
+            rule=f"at least {format_duration(job.source.settle_ns)} old",
             got="only younger ones",
             remedy="run again later, or --set 'source.settle=0 s' if nothing is being written",
         )
@@ -190,10 +182,16 @@ def _absent(state: Ledger, inventory: Inventory, shards: dict[str, Shard], table
 
 def _tell(listen: Listener, inventory: Inventory, absent: list[str]) -> None:
     if inventory.unsettled:
-        listen(Noted(f"{len(inventory.unsettled)} shards are younger than source.settle and left for the next run"))
+        text = "left for the next run: younger than source.settle, or replaced just now"
+        listen(Noted(f"{_some(inventory.unsettled)} {text}"))
     vanished = sorted(set(absent) - set(inventory.unsettled))
     if vanished:
-        listen(Noted(f"{len(vanished)} shards that are in are not listed any more and kept: {', '.join(vanished[:3])}"))
+        listen(Noted(f"{_some(vanished)} kept, though not listed any more"))
+
+
+def _some(keys: Sequence[str]) -> str:
+    """Return how many shards these are, and the names of the first few."""
+    return f"{len(keys)} shard{'s' if len(keys) > 1 else ''} ({some_names(keys)})"
 
 
 def _nothing_readable(job: Job, standing: dict[str, Entry]) -> InputError:

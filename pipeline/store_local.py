@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import errno
 import os
+import stat
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
@@ -119,7 +120,7 @@ class LocalAdapter:
             status = os.stat(self.root / key)
         except (FileNotFoundError, NotADirectoryError):
             return None
-        if not os.path.isfile(self.root / key):
+        if not stat.S_ISREG(status.st_mode):
             return None
         return ObjectInfo(key, _version(status), status.st_size, status.st_mtime)
 

@@ -1,9 +1,7 @@
 """An S3 bucket, or a folder of one, as a store: the only place that knows what S3 requests look like.
 
-Session, credentials and event loop are those of s3fs; requests go to its asynchronous client directly, since the
-file-like calls of s3fs translate answers, try again on their own and drop arguments that they do not know.
-botocore is told not to try again either: `store_retries.Retrying` alone decides on that. What an error of the
-client means is said in `store_s3_faults`.
+The client is made in `store_s3_client`, and what an error of it means is said in `store_s3_faults`. No request is
+sent a second time here.
 """
 
 from __future__ import annotations
@@ -11,13 +9,9 @@ from __future__ import annotations
 import asyncio
 from collections.abc import Callable, Coroutine
 from datetime import datetime
-from functools import lru_cache
 from typing import Any, TypeVar
-from urllib.parse import urlsplit
 
-import botocore.loaders
 import fsspec.asyn
-import s3fs.core
 from botocore.exceptions import ClientError
 
 from shardfold.errors import InputError, NothingToRead, ShardfoldError
@@ -34,6 +28,7 @@ from shardfold.store_promises import (
     version_changed,
     visible,
 )
+from shardfold.store_s3_client import file_system, without_user
 from shardfold.store_s3_faults import http_status, is_missing_object, translate
 
 LANES = 4
@@ -43,13 +38,6 @@ CHUNK_BYTES = 2**20
 PAGE_KEYS = 1000
 QUOTE = '"'
 _TOKEN = "shardfold-create"
-_CONFIG = {
-    "connect_timeout": 5,
-    "read_timeout": 30,
-    "max_pool_connections": 64,
-    "retries": {"total_max_attempts": 1, "mode": "standard"},
-}
-
 T = TypeVar("T")
 
 
@@ -63,15 +51,7 @@ class S3Adapter:
         self.prefix = f"{path.strip('/')}/" if path.strip("/") else ""
         self._endpoint = settings.endpoint or ""
         self._bucket_seen = False
-        self._files = s3fs.core.S3FileSystem(
-            anon=settings.anonymous,
-            endpoint_url=settings.endpoint,
-            client_kwargs={"region_name": settings.region} if settings.region else {},
-            config_kwargs=_CONFIG,
-            session=_session(),
-            skip_instance_cache=True,
-            use_listings_cache=False,
-        )
+        self._files = file_system(settings)
 
     @property
     def name(self) -> str:
@@ -138,7 +118,7 @@ class S3Adapter:
     async def _exchange(self, key: str, ask: Callable[[Any], Coroutine[Any, Any, T]]) -> T:
         try:
             client = await self._client()
-            self._endpoint = _without_user(client.meta.endpoint_url)
+            self._endpoint = without_user(client.meta.endpoint_url)
             return await ask(client)
         except ShardfoldError:
             raise
@@ -269,23 +249,6 @@ class S3Adapter:
             if done != len(buffer):
                 got = f"{done} bytes"
                 raise Transient("an answer ended early", where=self.place(key), rule=f"{len(buffer)} bytes", got=got)
-
-
-@lru_cache(maxsize=1)
-def _loader() -> Any:
-    return botocore.loaders.create_loader()
-
-
-def _session() -> Any:
-    """Return a session that looks for credentials afresh, but reads the description of S3 (0.3 s) once per process."""
-    session = s3fs.core.aiobotocore.session.AioSession()
-    session.register_component("data_loader", _loader())
-    return session
-
-
-def _without_user(url: str) -> str:
-    parts = urlsplit(url)
-    return parts._replace(netloc=parts.netloc.rpartition("@")[2]).geturl()
 
 
 def _info(key: str, etag: str, size: int, modified: datetime) -> ObjectInfo:

@@ -73,14 +73,9 @@ def _start_of_pattern(line: str, column: int) -> int:
 
 
 def _in_quotes(value: str, key: str, keys: list[str]) -> str:
-    """Return what to write, unless it could show a secret."""
-    if (
-        not value
-        or '"' in value
-        or "\\" in value
-        or holds_secret(value)
-        or any(looks_secret(("storage", key)) for key in keys)
-    ):
+    """Return what to write, unless it could show a secret: one whose key stands on another line cannot be told."""
+    secret = not keys or holds_secret(value) or any(looks_secret(("storage", name)) for name in keys)
+    if secret or not value or '"' in value or "\\" in value:
         return "put it in quotes"
     return f'write {key}: "{value}"' if key else f'write "{value}"'
 

@@ -64,7 +64,8 @@ class Seaweed:
     def __init__(self) -> None:
         self.folder = Path(tempfile.mkdtemp(prefix="seaweed-"))
         self.access_key, self.secret_key = uuid4().hex, uuid4().hex
-        master, volume, filer, s3 = free_ports(4)
+        self._ports = free_ports(4)
+        master, volume, filer, s3 = self._ports
         self.endpoint = f"http://{LOOPBACK}:{s3}"
         self._client = self._connect()
         self._write_identities()
@@ -111,6 +112,10 @@ class Seaweed:
         self._process.wait()
         self._log.close()
         shutil.rmtree(self.folder, ignore_errors=True)
+        # The gRPC sockets have a fixed folder and are named by the port.
+        for port in self._ports:
+            for path in Path("/tmp").glob(f"seaweedfs-*-{port + 10_000}.sock"):
+                path.unlink(missing_ok=True)
 
     def __enter__(self) -> Seaweed:
         return self

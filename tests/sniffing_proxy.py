@@ -150,7 +150,8 @@ def _handler_of(proxy: SniffingProxy) -> type[BaseHTTPRequestHandler]:
         do_GET = do_PUT = do_HEAD = do_POST = do_DELETE = handle_one
 
         def _answer_status(self, fault: Fault) -> None:
-            body = f"<Error><Code>{fault.code}</Code><Message>injected</Message></Error>".encode()
+            error = f"<Error><Code>{fault.code}</Code><Message>injected</Message></Error>"
+            body = b"" if fault.status < 300 else error.encode()
             self.send_response_only(fault.status)
             self.send_header("Content-Length", str(len(body)))
             self.end_headers()

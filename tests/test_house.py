@@ -29,7 +29,7 @@ LAYERS = (
     "errors ids events",
     "job job_* yaml_* quantities layout store store_* local_s3 blas",
     "readers readers.* inventory channels artifacts tables design",
-    "dossier plan budget ledger publish",
+    "dossier plan budget ledger refusals publish",
     "block_cuts gather project tasks executor",
     "executor_ray site ingest sums finish",
     "run forecast",

@@ -6,6 +6,8 @@ import pickle
 import traceback
 
 import pytest
+from hypothesis import example, given, settings
+from hypothesis import strategies as st
 from job_texts import WIDE, faults_of, with_line
 
 from shardfold.errors import JobInvalid
@@ -54,7 +56,38 @@ def test_what_is_said_of_a_secret():
     assert faults_of(text, f"dossier.storage.endpoint=http://a:{SECRET}@h") == [
         f"bridge.yaml:3: source.storage.key: must not stand in a job (got a value that is not shown); {chain}",
         "bridge.yaml:3: source.storage.profile: must not stand in a job; set AWS_PROFILE in the environment",
-        "--set: dossier.storage.endpoint: must not carry credentials, which would end in logs and manifests "
+        "--set: dossier.storage.endpoint: must not carry credentials such as user:password, which would end in logs "
+        "and manifests "
         f"(got a value that is not shown); {chain}",
     ]
     assert SECRET not in "".join(faults_of(WIDE, f"source.storage.key={SECRET}", f"source.storage.key:{SECRET}"))
+
+
+KEYS_OF_SECRETS = [
+    "  storage: {secret: ",
+    "  storage:\n    password: ",
+    "secret_key: ",
+    "  storage: {endpoint: http://u:",
+]
+SIGNS = [*"*&!@%[]{},'\"\n#\t|>?\\", ": ", "- ", "\n  ", "match: x", "storage:"]
+
+
+@settings(deadline=None, max_examples=5000)
+@given(
+    st.lists(st.sampled_from([sign for sign in SIGNS if len(sign) == 1 and sign != "\n"]), max_size=3).map("".join),
+    st.sampled_from(KEYS_OF_SECRETS),
+    st.lists(st.sampled_from(SIGNS), max_size=5).map("".join),
+)
+@example("", "  storage:\n    password: ", "@host: \t")
+@example("*", "  storage: {secret: ", "}")
+@example("\n*", "  storage: {secret: ", "")
+@example("", "  storage: {endpoint: http://u:", "}")
+def test_broken_yaml_around_a_secret_does_not_show_it(before, key, after):
+    """Whatever the parser complains about, as long as it is a value: unknown keys have to be named."""
+    told = ""
+    try:
+        parse_job(with_line(f"{key}{before}{SECRET}{after}"), "bridge.yaml")
+    except JobInvalid as error:
+        told = str(error)
+    assert told
+    assert SECRET not in told

@@ -9,14 +9,14 @@ from collections.abc import Sequence
 from typing import Protocol
 
 from shardfold.errors import InputError
-from shardfold.readers.batch import Batch, ByteSource, Reader, group_peak_bytes
+from shardfold.readers.batch import Batch, ByteSource, Fetched, Reader, group_peak_bytes
 from shardfold.readers.npy import NpyReader
 from shardfold.readers.parquet import ParquetReader
 from shardfold.readers.times import TimeRule
 from shardfold.readers.vector import Vector
 from shardfold.readers.wide import Wide
 
-__all__ = ["Batch", "ByteSource", "Reader", "SourceSettings", "group_peak_bytes", "reader_for"]
+__all__ = ["Batch", "ByteSource", "Fetched", "Reader", "SourceSettings", "group_peak_bytes", "reader_for"]
 
 
 class ChannelSettings(Protocol):

@@ -88,19 +88,16 @@ class Reader(Protocol):
         """Yield the batches of the same row groups, fetched and decoded one after the other."""
         ...
 
-    def group_peak_bytes(self, group: RowGroup) -> int:
-        """Return an upper bound of the private bytes held while one row group is read, its batches included."""
-        ...
-
 
 def group_peak_bytes(group: RowGroup) -> int:
-    """Return an upper bound, over all layouts, of the private bytes held while one row group is read.
+    """Return an upper bound, over all layouts, of the private bytes that reading row groups like this one holds.
 
-    ``stored_bytes`` (the bytes as fetched) + ``decoded_bytes`` (the batch) + `SCRATCH_BYTES` (pages and slices on
-    their way from one to the other, and the footer). A batch that the caller still holds when it asks for the next
-    one comes on top.
+    It counts one row group being decoded while the next is fetched: ``stored_bytes`` as fetched, the larger of
+    ``stored_bytes`` (the next, while slices of this one are handed on) and ``decoded_bytes`` (its batches, all at
+    once), and `SCRATCH_BYTES` (pages and slices on their way from one to the other, and the footer). Batches that a
+    caller still holds when it asks for others come on top.
     """
-    return group.stored_bytes + group.decoded_bytes + SCRATCH_BYTES
+    return group.stored_bytes + max(group.stored_bytes, group.decoded_bytes) + SCRATCH_BYTES
 
 
 def one_by_one(groups: Iterator[Fetched]) -> Iterator[Batch]:

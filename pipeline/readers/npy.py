@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 
 from shardfold.channels import keep_names
 from shardfold.ids import ObjectInfo, RowGroup, Shard
-from shardfold.readers.batch import SCRATCH_BYTES, Batch, ByteSource, Fetched, one_by_one, refused
+from shardfold.readers.batch import Batch, ByteSource, Fetched, one_by_one, refused
 from shardfold.readers.times import Grid, TimeRule, grid_of
 from shardfold.readers.vector import channel_names, places
 
@@ -99,10 +99,6 @@ class NpyReader:
                 yield _decoded(Batch(first_row, times, _sample_major(store, header, first_row, rows, wanted)))
             else:
                 yield _decoded(Batch(first_row, times, _channel_major(store, header, wanted)))
-
-    def group_peak_bytes(self, group: RowGroup) -> int:
-        """Return an upper bound of the private bytes held while one row group is read: its values and one part."""
-        return max(group.stored_bytes, group.decoded_bytes) + GROUP_BYTES + SCRATCH_BYTES
 
     def _all_names(self, header: Header) -> tuple[str, ...]:
         return channel_names(header.info, header.channels, self.names)

@@ -19,7 +19,6 @@ from shardfold.readers.batch import (
     Batch,
     ByteSource,
     Fetched,
-    group_peak_bytes,
     one_by_one,
     refused,
     some_names,
@@ -87,16 +86,12 @@ class ParquetReader:
         """Yield the batches of some row groups; see `Reader`."""
         return one_by_one(self.fetched(store, shard, first_group, stop_group, channels))
 
-    def group_peak_bytes(self, group: RowGroup) -> int:
-        """Return an upper bound of the private bytes held while one row group is read."""
-        return group_peak_bytes(group)
-
     def _open(self, store: ByteSource, info: ObjectInfo) -> _Opened:
         footer = read_footer(store, info)
         if not sum(footer.rows):
             raise refused(info, "the shard holds no samples", rule="at least one row", got="0 rows")
-        time_field = _time_field(footer, self.time)
         with refusing(info, "the footer cannot be understood"):
+            time_field = _time_field(footer, self.time)
             columns = self.layout.find(footer, time_field)
         return _Opened(footer, columns, time_field, grid_of(self.time, info, sum(footer.rows)))
 

@@ -25,12 +25,13 @@ from shardfold.channels import keep_names
 from shardfold.errors import InputError
 from shardfold.ids import ObjectInfo, Shard
 from shardfold.job import TimeColumn, TimeFromName, TimeStart
-from shardfold.readers import Batch, Reader, group_peak_bytes, reader_for
+from shardfold.readers import Batch, Reader, reader_for
 from shardfold.readers.footer import GAP_BYTES, TAIL_BYTES
 from shardfold.store import StoreSettings, connect
 
 START, STEP = 1_930_089_600_000_000_000, 125_000_000  # 2031-03-01T00:00:00Z and 125 ms
 FROM_NAME = TimeFromName(from_name=r"(\d{8}T\d{6}Z)\.", step="125 ms")
+T = TimeColumn(column="t")
 KEY = "run/20310301T000000Z."
 
 
@@ -47,7 +48,7 @@ class Source:
     """Stands for ``source``: the attributes that readers look at."""
 
     layout: str
-    time: Any = TimeColumn(column="t")
+    time: Any = T
     values: str | None = "strain"
     orient: str = "samples_by_channels"
     channels: Channels = field(default_factory=Channels)
@@ -221,9 +222,9 @@ def test_channels_are_left_out_by_pattern_and_read_in_the_order_asked_for(case: 
     assert sum(g.decoded_bytes for g in shard.groups) == sum(b.values.nbytes + b.times.nbytes for b in batches)
 
 
-def test_the_channel_table_names_places(case: Case, values: np.ndarray) -> None:
-    if case.source.layout == "wide":
-        pytest.skip("columns have names of their own")
+@pytest.mark.parametrize("name", [name for name in CASES if name != "wide"])
+def test_the_channel_table_names_places(name: str, values: np.ndarray) -> None:
+    case = CASES[name]
     source = Source(**{**vars(case.source), "channels": Channels(include=("tip", "root*"))})
     shelf, reader = Shelf(case.write(values, groups=2)), reader_for(source, ("root", "a", "b", "c", "tip"))
     shard = reader.describe(shelf, shelf.info)
@@ -473,7 +474,7 @@ from pathlib import Path
 from types import SimpleNamespace as Plain
 from shardfold.ids import ObjectInfo
 from shardfold.job import TimeColumn
-from shardfold.readers import reader_for
+from shardfold.readers import group_peak_bytes, reader_for
 
 class Files:
     def read(self, key, *, version=None, start=0, stop=None):
@@ -486,38 +487,39 @@ class Files:
 def kib(word):
     return next(int(line.split()[1]) for line in open("/proc/self/status") if line.startswith(word))
 
-def first(path):
+def read(path):
     shard = reader.describe(files, ObjectInfo(path, "", Path(path).stat().st_size, 0.0))
-    return shard.groups[0], reader.batches(files, shard, 0, 1, shard.channels)
+    ahead = reader.fetched(files, shard, 0, len(shard.groups), shard.channels)
+    group = next(ahead, None)
+    while group is not None:
+        batches, group = group(), None
+        for batch in batches:
+            group = group or next(ahead, None)
+            del batch
+    return shard.groups[0]
 
 layout, warm, path = sys.argv[1:]
 time = None if layout == "array" else TimeColumn(column="t")
-channels = Plain(include=None, exclude=("ch00001",))
+channels = Plain(include=None, exclude=("ch00001", "ch002*"))
 reader, files = reader_for(Plain(layout=layout, time=time, values="strain", orient="x", channels=channels)), Files()
-list(first(warm)[1])
-group, batches = first(path)
+read(warm)
 before = kib("VmRSS")
 Path("/proc/self/clear_refs").write_text("5")
-batch = next(batches)
-print((kib("VmHWM") - before) * 1024, reader.group_peak_bytes(group), group.decoded_bytes)
+group = read(path)
+print((kib("VmHWM") - before) * 1024, group_peak_bytes(group), max(group.stored_bytes, group.decoded_bytes))
 """
 
 
 @pytest.mark.skipif(not Path("/proc/self/clear_refs").exists(), reason="peaks are read from Linux's /proc")
 @pytest.mark.parametrize("name", ["wide", "fixed_size_list", "list", "npy_fortran"])
 def test_the_peak_stays_below_its_formula(name: str, tmp_path: Path) -> None:
+    """With the next row group fetched while one is decoded, as a worker does."""
     case = CASES[name]
-    values = np.random.default_rng(2).standard_normal((600, 16_000)).astype(np.float32)
+    values = np.random.default_rng(2).standard_normal((600, 24_000)).astype(np.float32)
     options = {"compression": "zstd"} if case.cut else {}
     (tmp_path / "warm").write_bytes(case.write(values[:, :8], 1))
-    (tmp_path / "shard").write_bytes(case.write(values, 1, **options))
+    (tmp_path / "shard").write_bytes(case.write(values, 2, **options))
     command = [sys.executable, "-c", PEAK, case.source.layout, str(tmp_path / "warm"), str(tmp_path / "shard")]
     done = subprocess.run(command, capture_output=True, text=True, check=True)
-    peak, promised, decoded = map(int, done.stdout.split())
-    assert 0.9 * decoded < peak < promised
-
-
-def test_the_general_bound_covers_every_layout(case: Case, values: np.ndarray) -> None:
-    shelf, reader = Shelf(case.write(values, groups=2)), reader_for(case.source)
-    for group in reader.describe(shelf, shelf.info).groups:
-        assert group.stored_bytes + group.decoded_bytes < group_peak_bytes(group)
+    peak, promised, largest = map(int, done.stdout.split())
+    assert 0.9 * largest < peak < promised

@@ -96,7 +96,7 @@ def test_an_empty_object_is_an_object(store: Counting) -> None:
 
 
 @pytest.mark.usefixtures("small_cuts")
-@settings(deadline=None, max_examples=60, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@settings(deadline=None, max_examples=40, suppress_health_check=[HealthCheck.function_scoped_fixture])
 @given(st.integers(0, 1234), st.integers(0, 1234) | st.none(), st.booleans())
 def test_any_range_is_exactly_those_bytes(store: Counting, start: int, stop: int | None, pinned: bool) -> None:
     data = bytes(i * i % 251 for i in range(1234))

@@ -65,7 +65,7 @@ def summation(n: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
 
 @pytest.mark.parametrize(
     ("design", "reads", "value_error", "worst_sine"),
-    [({"width": 100}, 1, 1e-12, 1e-11), ({"width": 24}, 2, 1e-6, 1e-3)],
+    [({"width": 100}, 1, 1e-12, 1e-11), ({"width": 40}, 2, 5e-6, 1e-3)],
     ids=["identity", "two-reads"],
 )
 def test_cumulative_sum(
@@ -73,13 +73,14 @@ def test_cumulative_sum(
 ) -> None:
     matrix, values, left = summation(200)
     write_vector(shore.campaign, matrix, even_times(200), shards=4, row_group=32)
-    found = shore.run("vector", 8, KEEP_MEAN | {"reads": reads}, design=design | {"leaf": "5 s"})
-    np.testing.assert_allclose(found.values, values[:8], rtol=value_error)
-    assert sines(found.modes, left[:, :8]).max() < worst_sine
-    # Energy is half of n (n + 1) ones; its captured share is exact whatever the probe.
+    found = shore.run("vector", 5, KEEP_MEAN | {"reads": reads}, design=design | {"leaf": "5 s"})
+    np.testing.assert_allclose(found.values, values[:5], rtol=value_error)
+    assert sines(found.modes, left[:, :5]).max() < worst_sine
+    # The energy, half of n (n + 1) ones, is exact whatever the probe; values are lower bounds.
+    assert (found.values < values[:5] * (1 + 1e-12)).all()
     assert found.result.manifest["quality"]["energy"] == pytest.approx(200 * 201 / 2, rel=1e-13)
     if reads == 1:
-        np.testing.assert_allclose(found.column("energy_fraction"), values[:8] ** 2 / 20_100, rtol=1e-12)
+        np.testing.assert_allclose(found.column("energy_fraction"), values[:5] ** 2 / 20_100, rtol=1e-12)
 
 
 def test_discrete_brownian_bridge(shore: Shore) -> None:
@@ -140,7 +141,8 @@ def test_rank_three_leaves_blanks(shore: Shore, orient: str) -> None:
     for name in ("singular_value", "rms", "energy_fraction", "energy_cumulative", "peak_channel", "rms_at_peak"):
         assert found.result.mode_table.column(name).to_pylist()[3:] == [None, None], name
     rebuilt = found.result.rebuild()
-    assert rebuilt.select(found.result.modes.column("channel").to_pylist()).to_pandas().notna().all(axis=None)
+    assert len(rebuilt) == matrix.shape[1]
+    assert all(np.isfinite(rebuilt.column(f"ch{place:05d}").to_numpy()).all() for place in range(len(matrix)))
 
 
 def test_simply_supported_beam(shore: Shore) -> None:
