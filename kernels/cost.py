@@ -6,7 +6,7 @@ allocates on top of its arguments, its results included. No measurement is taken
 
 from __future__ import annotations
 
-from .factors import next_width
+from .factors import probe_width
 from .whole import Shape, chunk_channels
 
 BLOCK_BYTES = 16 << 20
@@ -76,7 +76,7 @@ def direct_coefficients_bytes(rank: int, m: int, samples: int) -> int:
 def next_probe_bytes(shape: Shape, rank: int) -> int:
     """Return the peak bytes of ``factors.next_probe``: the pivoted QR, then the rows and their rounded copies."""
     decomposition = 4 * shape.m * shape.k + 2 * shape.k * shape.k
-    rows = (3 * next_width(shape.k, rank) + 1) * shape.m
+    rows = (3 * probe_width(shape.k, rank) + 1) * shape.m
     return _FLOAT * max(decomposition, rows) + SMALL_BYTES
 
 

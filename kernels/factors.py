@@ -24,7 +24,7 @@ Floats = NDArray[np.float64]
 EPS = float(np.finfo(np.float64).eps)
 DIRECTION_ULPS = 64  # directions of W this close to rounding (measured: up to 5 eps) point nowhere
 ROW_SPACE_FLOOR = 1e-13  # least eigenvalue of the scaled C that still counts as a direction, relative to the largest
-FLOOR_ULPS = 4  # spurious eigenvalues were measured up to 2.6 eps of the energy, with and without offsets
+FLOOR_ULPS = 16  # spurious eigenvalues were measured up to 8.6 eps of the energy (3 to 5 channels, rank 1 to 3)
 PEAK_SHARE = 0.9  # the first channel this close to the largest decides the sign
 
 
@@ -201,9 +201,9 @@ def captured_by_channel(factors: Factors, rank: int) -> Floats:
     return captured
 
 
-def next_width(k: int, rank: int) -> int:
-    """Return the most rows the probe of the next read can have after a read with k rows; see ``next_probe``."""
-    return k + 1 + _fresh_rows(k, rank)
+def probe_width(width: int, rank: int) -> int:
+    """Return the most rows ``next_probe`` can have after a read with ``width`` rows: those, the mean, random ones."""
+    return width + 1 + _fresh_rows(width, rank)
 
 
 def next_probe(summary: Summary, rank: int, seed: int, pass_number: int, keys: NDArray[np.integer]) -> Floats:
@@ -248,11 +248,6 @@ def next_probe(summary: Summary, rank: int, seed: int, pass_number: int, keys: N
 
 def _fresh_rows(k: int, rank: int) -> int:
     return max(14, rank, -(-k // 3))
-
-
-def probe_width(width: int, rank: int) -> int:
-    """Return the most rows the next read's probe has: the directions of this one's and the random rows."""
-    return width + max(14, rank, -(-width // 3))
 
 
 def _floor(summary: Summary, keep_mean: bool) -> float:

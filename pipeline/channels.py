@@ -148,7 +148,7 @@ def to_arrow(table: ChannelTable) -> pa.Table:
     """Return the table as Arrow columns, with descriptions and units of columns in field metadata."""
     columns = {"channel": pa.array(table.names, pa.string()), "unit": pa.array(table.unit, pa.string())}
     columns.update({factor: pa.array(getattr(table, factor)) for factor in FACTORS})
-    columns.update({name: pa.array(values) for name, values in table.positions.items()})
+    columns.update({name: pa.array(values, from_pandas=True) for name, values in table.positions.items()})
     fields = [
         pa.field(name, column.type, metadata={"description": DESCRIPTIONS.get(name, "position of the channel")})
         for name, column in columns.items()

@@ -36,6 +36,7 @@ from shardfold.site import local_places
 F = TypeVar("F", bound=Callable[..., Any])
 
 REFUSED_STATUS = 3
+BROKEN_PIPE_STATUS = 128 + signal.SIGPIPE
 
 
 def _common(function: F) -> F:
@@ -179,10 +180,13 @@ def _status(arguments: list[str] | None) -> int:
         return _fail(_stopped(signal.SIGINT), as_json)
     except ShardfoldError as error:
         return _fail(error, as_json)
+    except BrokenPipeError:
+        # Whoever read the answer has gone, as `head` does; the flush at the end of Python must not fail again.
+        sys.stdout = open(os.devnull, "w")  # noqa: SIM115
+        return BROKEN_PIPE_STATUS
     except Exception as error:
         traceback.print_exc()
-        click.echo(f"shardfold: a bug: {type(error).__name__}; the lines above say where", err=True)
-        return ShardfoldError.exit_status
+        return _fail(ShardfoldError(f"a bug: {type(error).__name__}; the lines above say where"), as_json)
     return 0
 
 

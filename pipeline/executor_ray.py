@@ -8,8 +8,11 @@ from __future__ import annotations
 
 import os
 import shutil
+import signal
 import tempfile
+import threading
 from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
@@ -74,19 +77,17 @@ class RayExecutor:
         shared = ray.put(workplace)
         waiting = iter(tasks)
         flying: dict[Any, Task] = {}
-        try:
-            while True:
-                while len(flying) < self._most_flying and (task := next(waiting, None)) is not None:
-                    flying[self._remote.remote(shared, task)] = task
-                if not flying:
-                    return
-                done, _ = ray.wait(list(flying), num_returns=1, timeout=STALL_SECONDS, fetch_local=False)
-                if not done:
-                    raise _stalled(len(flying))
-                yield flying.pop(done[0]), _get(done[0])
-        finally:
-            for reference in flying:
-                ray.cancel(reference, force=False)
+        # Where the stage ends early, tasks in flight are left to end or to go down with this driver: cancelling one
+        # that is just done makes Ray 2.60 abort the process.
+        while True:
+            while len(flying) < self._most_flying and (task := next(waiting, None)) is not None:
+                flying[self._remote.remote(shared, task)] = task
+            if not flying:
+                return
+            done, _ = ray.wait(list(flying), num_returns=1, timeout=STALL_SECONDS, fetch_local=False)
+            if not done:
+                raise _stalled(len(flying))
+            yield flying.pop(done[0]), _get(done[0])
 
     def nodes(self) -> int:
         """Return the number of live nodes."""
@@ -127,7 +128,8 @@ def _short_temporary_folder() -> str:
 
 def _init(place: str, options: dict[str, Any]) -> None:
     try:
-        ray.init(logging_level="ERROR", log_to_driver=False, **options)
+        with _sigterm_kept():
+            ray.init(logging_level="ERROR", log_to_driver=False, **options)
     except (ConnectionError, RuntimeError, ValueError, TimeoutError) as error:
         raise ClusterFailed(
             "a local Ray could not be started" if place == "local" else "Ray could not be reached",
@@ -136,6 +138,23 @@ def _init(place: str, options: dict[str, Any]) -> None:
             got=f"{place}: {str(error).splitlines()[0]}",
             remedy="check the address, or run with --set engine.workers=serial",
         ) from error
+
+
+@contextmanager
+def _sigterm_kept() -> Iterator[None]:
+    """Keep the program's own handler of SIGTERM: Ray sets one, when it starts, that ends the process with status 15."""
+    before = signal.getsignal(signal.SIGTERM)
+    if not callable(before) or threading.current_thread() is not threading.main_thread():
+        yield
+        return
+    try:
+        yield
+    except SystemExit as end:
+        if end.code == signal.SIGTERM:
+            before(signal.SIGTERM, None)
+        raise
+    finally:
+        signal.signal(signal.SIGTERM, before)
 
 
 def _get(reference: Any) -> Outcome:

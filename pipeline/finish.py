@@ -21,6 +21,7 @@ from shardfold.kernels.spectra import dominant_frequency
 from shardfold.kernels.whole import Shape, Summary
 from shardfold.plan import Cell
 from shardfold.publish import Finding
+from shardfold.refusals import changed_between_reads
 from shardfold.tasks import CoefficientMap, Outcome, PartWritten, Refusal, Task, Workplace, WriteCoefficients
 
 Array = npt.NDArray[Any]
@@ -126,7 +127,7 @@ def _in_order(
     task = next(due, None)
     for _, outcome in outcomes:
         if isinstance(outcome, Refusal):
-            raise outcome.error
+            raise changed_between_reads(outcome.error)
         assert isinstance(outcome, PartWritten)
         listen(TaskDone("coefficients", outcome.bytes_read))
         early[outcome.key] = outcome

@@ -14,7 +14,7 @@ from typing import Any
 import numpy as np
 
 from shardfold import artifacts, layout
-from shardfold.errors import InputError, ShardRefused, WriterConflict
+from shardfold.errors import ShardRefused, WriterConflict
 from shardfold.events import Committed, Listener, Refused, StageDone, StageStarted, TaskDone
 from shardfold.executor import Executor
 from shardfold.gather import check_repeats
@@ -22,7 +22,7 @@ from shardfold.ids import Shard, digest_bytes
 from shardfold.kernels.whole import Shape
 from shardfold.ledger import Entry, Leaf, LeafState, Ledger, commit, difference, load
 from shardfold.plan import Cell, bytes_to_read, cut
-from shardfold.refusals import beside_vanished, message_of, nothing_left, refusal_of
+from shardfold.refusals import beside_vanished, changed_between_reads, message_of, nothing_left, refusal_of, vanished
 from shardfold.store import Store
 from shardfold.tasks import CellRead, ReadCell, Refusal, Workplace
 
@@ -121,13 +121,13 @@ def bring_in(intake: Intake, read: int, shape: Shape, probe_digest: str) -> tupl
         cells = intake.cells(read, shape, probe_digest)
         stored = _stored(intake.store, read)
         todo = [cell for cell in cells if cell.name not in stored]
-        blocked = _blocked(intake, todo)
+        blocked = blocked_by_vanished(intake, todo)
         refusals = blocked or _read(intake, read, shape, cells, todo)
         if not refusals:
             refusals = list(_rivals(intake, read, cells).values())
         for error in sorted(refusals, key=intake.first_to_drop):
             if read > 1:
-                raise _changed_between_reads(error)
+                raise changed_between_reads(error)
             intake.drop(error)
         if not intake.shards:
             _commit(intake, read, ())
@@ -285,26 +285,26 @@ def _count_down(left: dict[str, int], cell: Cell) -> int:
     return done
 
 
-def _blocked(intake: Intake, todo: Sequence[Cell]) -> list[ShardRefused]:
-    """Return refusals of shards whose cell would need a shard that is no longer there."""
+def blocked_by_vanished(intake: Intake, todo: Sequence[Cell]) -> list[ShardRefused]:
+    """Return refusals of new shards whose cell would need a shard that is no longer there.
+
+    Raises
+    ------
+    InputError
+        If a cell holds no new shard, so that nothing but the vanished one can help.
+    """
     refusals = []
     for cell in todo:
         gone = [p.shard.key for p in cell.pieces if p.shard.key in intake.absent]
         new = [p.shard for p in cell.pieces if p.shard.key not in intake.absent and not intake.is_in(p.shard.key)]
         if gone and not new:
-            raise InputError(
-                "a shard that is in has vanished, and what it gave must be read again",
-                where=gone[0],
-                rule=f"the shards of leaf {cell.leaf}, read {cell.read}, are still in the campaign",
-                got=f"{len(gone)} of them are not listed any more",
-                remedy="put the shard back under its name, or start a new dossier without it",
-            )
+            raise vanished(cell, gone)
         refusals += [beside_vanished(shard, gone[0]) for shard in new if gone]
     return refusals
 
 
 def _rivals(intake: Intake, read: int, cells: Sequence[Cell]) -> dict[int, ShardRefused]:
-    """Return, by leaf, refusals of shards that repeat a time of another cell of the leaf; committed leaves have none."""
+    """Return refusals of shards that repeat a time of another cell, by leaf; leaves committed so have none."""
     if read > 1 or not intake.workplace.design.timed:
         return {}
     by_leaf: dict[int, list[Cell]] = {}
@@ -340,16 +340,6 @@ def _overlap(cells: Sequence[tuple[dict[str, Any], ...]]) -> bool:
             spans.append((min(firsts), max(lasts)))
     spans.sort()
     return any(later[0] <= earlier[1] for earlier, later in pairwise(spans))
-
-
-def _changed_between_reads(error: ShardRefused) -> InputError:
-    return InputError(
-        "a shard changed between the first read and a further one",
-        where=error.shard,
-        rule="every read sees the same shard versions",
-        got=error.what,
-        remedy="run again: the changed shard is taken anew then",
-    )
 
 
 def _outpaced() -> WriterConflict:

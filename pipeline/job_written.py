@@ -15,6 +15,7 @@ MOST_CHARACTERS = 200_000
 
 _NEEDED_SECTIONS = ("source", "dossier")
 _KEY = re.compile(r"[A-Za-z_][\w-]*(\.[A-Za-z_][\w-]*)*")
+_NAME = re.compile(r"[A-Za-z_-]{1,40}")
 _CHAIN = "credentials come from the environment (AWS_ACCESS_KEY_ID, ...) or a profile (AWS_PROFILE) alone"
 
 
@@ -141,7 +142,7 @@ def _on_s3(location: Entry) -> bool:
 def _take_out_secrets(root: Entry) -> list[Fault]:
     """Return a fault for each credential, and forget its value."""
     faults = []
-    for path, entry in list(root.walk()):
+    for path, entry in root.walk():  # what is made void is not walked into
         fault = _secret(path, entry)
         if fault is not None:
             entry.make_void()
@@ -156,6 +157,9 @@ def _secret(path: tuple[str, ...], entry: Entry) -> Fault | None:
     if holds_secret(entry.written) or ("storage" in path and "@" in entry.written):
         rule = "must not carry credentials such as user:password, which would end in logs and manifests"
         return Fault(entry.spot, key, rule, NOT_SHOWN, _CHAIN)
+    if "storage" in path[:-1] and not _NAME.fullmatch(path[-1]):
+        rule = "holds a key that is no name, perhaps a credential that slipped out of place"
+        return Fault(entry.spot, ".".join(path[:-1]), rule, NOT_SHOWN, _CHAIN)
     if path[-1:] == ("profile",) and "storage" in path:
         return Fault(entry.spot, key, "must not stand in a job", remedy="set AWS_PROFILE in the environment")
     return None

@@ -5,11 +5,12 @@ Pure: entries and errors in, entries, errors and texts out. Who refuses, and whe
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 
-from shardfold.errors import InputError, ShardRefused, told
+from shardfold.errors import InputError, ShardRefused, VersionChanged, told
 from shardfold.ids import Shard
 from shardfold.ledger import Entry, Ledger
+from shardfold.plan import Cell
 
 
 def refusal_of(error: ShardRefused, shard: Shard, under: str, rival: Mapping[str, str] | None = None) -> Entry:
@@ -85,4 +86,26 @@ def beside_vanished(shard: Shard, gone: str) -> ShardRefused:
         rule="to add it, all small shards of its leaf are read again",
         got=f"{gone} is not listed any more",
         remedy=f"put {gone} back under its name, then run again",
+    )
+
+
+def vanished(cell: Cell, gone: Sequence[str]) -> InputError:
+    """Return the error for a cell that must be read again though some of its shards are no longer there."""
+    return InputError(
+        "a shard that is in has vanished, and what it gave must be read again",
+        where=gone[0],
+        rule=f"the shards of leaf {cell.leaf}, read {cell.read}, are still in the campaign",
+        got=f"{len(gone)} of them {'is' if len(gone) == 1 else 'are'} not listed any more",
+        remedy="put the shard back under its name, or start a new dossier without it",
+    )
+
+
+def changed_between_reads(error: ShardRefused) -> VersionChanged:
+    """Return the error for a shard that was sound when it was first read, and is not when it is read again."""
+    return VersionChanged(
+        "a shard changed between its first reading and a further one; nothing was published",
+        where=error.shard,
+        rule="every reading sees the same shard versions",
+        got="; got ".join(part for part in (error.what, error.got) if part),
+        remedy="run again: the shard is taken as it is then",
     )

@@ -24,7 +24,7 @@ from shardfold.executor import Executor
 from shardfold.finish import finding_of, too_few_samples, write_parts, write_probe
 from shardfold.gather import moment
 from shardfold.ids import digest_value
-from shardfold.ingest import Intake, bring_in
+from shardfold.ingest import Intake, blocked_by_vanished, bring_in
 from shardfold.job import Job
 from shardfold.kernels.factors import probe_width
 from shardfold.kernels.whole import Shape, Summary
@@ -229,6 +229,8 @@ def _publish(
     if store.head(prefix + layout.MANIFEST) is not None:
         intake.listen(Published(location, new=False))
         return _report(site, intake, location, False, len(probes), {})
+    if shape.identity:
+        blocked_by_vanished(intake, cells)  # the coefficients are read again
     summary = _sum(site, intake, len(probes), shape, cells)
     finding = finding_of(
         site.dossier, summary, site.job.modes.rank, "mean" not in site.job.modes.remove, intake.listen

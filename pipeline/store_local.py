@@ -24,6 +24,7 @@ from shardfold.store_promises import (
     check_key,
     check_range,
     cuts,
+    room,
     version_changed,
     visible,
 )
@@ -75,7 +76,7 @@ class LocalAdapter:
                 if _version(status) != noted:
                     raise version_changed(self.place(key), noted, _version(status))
                 end = check_range(self.place(key), status.st_size, start, stop)
-                buffer = memoryview(bytearray(end - start))
+                buffer = room(end - start)
                 for low, high in cuts(start, end):
                     _read_all(file.fileno(), buffer[low - start : high - start], low)
                 if _version(os.fstat(descriptor)) != noted:

@@ -25,6 +25,7 @@ from shardfold.store_promises import (
     check_key,
     check_range,
     cuts,
+    room,
     version_changed,
     visible,
 )
@@ -170,7 +171,7 @@ class S3Adapter:
         if version is None:
             return await self._read_any(client, key, start, stop)
         end = check_range(self.place(key), _size(version), start, stop)
-        buffer = memoryview(bytearray(end - start))
+        buffer = room(end - start)
         if start == end:
             await self._read_nothing(client, key, version)
         await self._fill(client, key, version, start, buffer)
@@ -186,7 +187,7 @@ class S3Adapter:
             return memoryview(b"")
         version = _version(answer["ETag"], _total(answer))
         end = check_range(self.place(key), _total(answer), start, stop)
-        buffer = memoryview(bytearray(end - start))
+        buffer = room(end - start)
         length = min(first[1], end) - start
         await self._receive(answer, key, version, start, buffer[:length])
         await self._fill(client, key, version, start + length, buffer[length:])

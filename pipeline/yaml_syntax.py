@@ -61,23 +61,27 @@ def _unquoted(lines: list[str], at: tuple[int, int]) -> tuple[tuple[int, int], s
     column = _start_of_pattern(line, at[1])
     before, value = line[:column], line[column:]
     rule = f"a value that starts with {value[:1]} needs quotes: the sign has a meaning of its own in YAML"
-    inner = re.search(r":\s+[\[{]", before) is not None
-    found = re.match(r"[^\s,\]}]+" if inner else r".+?(?=\s+#|\s*$)", value)
+    return (at[0], column), rule, "put it in quotes" if _may_be_secret(line, before) else _in_quotes(before, value)
+
+
+def _may_be_secret(line: str, before: str) -> bool:
+    """Return whether a line may hold a secret; where the key stands on another line that cannot be told."""
     keys = _KEYS.findall(before)
-    return (at[0], column), rule, _in_quotes(found[0] if found else "", "" if inner else "".join(keys[-1:]), keys)
+    return not keys or holds_secret(line) or any(looks_secret(("storage", key)) for key in keys)
+
+
+def _in_quotes(before: str, rest: str) -> str:
+    """Return what to write: the value in quotes, with its key unless it stands within brackets."""
+    inner = re.search(r":\s+[\[{]", before) is not None
+    found = re.match(r"[^\s,\]}]+" if inner else r".+?(?=\s+#|\s*$)", rest)
+    if found is None or '"' in found[0] or "\\" in found[0]:
+        return "put it in quotes"
+    return f'write "{found[0]}"' if inner else f'write {_KEYS.findall(before)[-1]}: "{found[0]}"'
 
 
 def _start_of_pattern(line: str, column: int) -> int:
     found = re.match(r"\s*(?:- )?[\w.-]+:\s+(?=\[[^\s,]*\]\S)", line)
     return found.end() if found and line[column - 1 : column] == "]" else column
-
-
-def _in_quotes(value: str, key: str, keys: list[str]) -> str:
-    """Return what to write, unless it could show a secret: one whose key stands on another line cannot be told."""
-    secret = not keys or holds_secret(value) or any(looks_secret(("storage", name)) for name in keys)
-    if secret or not value or '"' in value or "\\" in value:
-        return "put it in quotes"
-    return f'write {key}: "{value}"' if key else f'write "{value}"'
 
 
 _INNER = "and put values that hold , [ ] { } or # in quotes"

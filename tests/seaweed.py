@@ -14,6 +14,7 @@ import subprocess
 import sys
 import tempfile
 import time
+from contextlib import suppress
 from pathlib import Path
 from types import TracebackType
 from typing import Any
@@ -171,12 +172,12 @@ class Seaweed:
     def _wait_ready(self) -> None:
         """Wait until the S3 door answers a signed request; it opens its port before that."""
         deadline = time.monotonic() + READY_SECONDS
-        while time.monotonic() < deadline and self._process.poll() is None:
-            try:
+        while time.monotonic() < deadline:
+            with suppress(BotoCoreError, ClientError):
                 self._client.list_buckets()
-            except (BotoCoreError, ClientError):
-                time.sleep(0.05)
-            else:
                 return
+            with suppress(subprocess.TimeoutExpired):
+                self._process.wait(0.05)
+                break
         log = (self.folder / "server.log").read_text(errors="replace")[-2000:]
         raise RuntimeError(f"the S3 server did not get ready on {self.endpoint}:\n{log}")

@@ -40,7 +40,7 @@ LAYERS = (
 DOORS = {
     "ray": ("executor_ray",),
     "s3fs": ("store*",), "fsspec": ("store*",), "botocore": ("store*", "local_s3"),
-    "aiobotocore": ("store*",), "aiohttp": ("store*",),
+    "aiohttp": ("store*",),
     "yaml": ("job*", "yaml*"), "pydantic": ("job*", "yaml*"),
     "pyarrow": ("readers*", "artifacts", "channels", "results", "tarnmoor", "tables"),
     "click": ("cli",), "rich": ("cli", "progress"),
@@ -416,8 +416,9 @@ def test_documented_job_keys_exist_and_existing_ones_are_documented():
             job.parse_job(text, name)
         except JobInvalid as error:
             faults += [fault for fault in error.faults if name.startswith("configs/") or "not a known key" in fault]
-    sections = "|".join(key for key in known if any(other.startswith(f"{key}.") for other in known))
-    dotted = {word for word in code_words("README.md") if re.fullmatch(rf"({sections})(\.[a-z_]+)+", word)}
+    sections = "|".join(sorted({key.split(".")[0] for key in known if "." in key}))
+    code = "\n".join(fences("README.md") + code_words("README.md"))
+    dotted = set(re.findall(rf"(?<![\w./])(?:{sections})(?:\.[a-z_]+)+", code))
     files = {word for word in dotted if word.endswith((".json", ".py", ".parquet"))}
     faults += [f"no key {word}" for word in sorted(dotted - files - set(known))]
     shown = "\n".join(text for name, text in texts.items() if name.startswith("configs/"))

@@ -10,9 +10,9 @@ from typing import Protocol
 
 from shardfold.errors import InputError
 from shardfold.readers.batch import Batch, ByteSource, Fetched, Reader, group_peak_bytes
+from shardfold.readers.grids import TimeRule
 from shardfold.readers.npy import NpyReader
 from shardfold.readers.parquet import ParquetReader
-from shardfold.readers.times import TimeRule
 from shardfold.readers.vector import Vector
 from shardfold.readers.wide import Wide
 

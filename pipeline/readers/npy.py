@@ -21,7 +21,7 @@ from numpy.typing import NDArray
 from shardfold.channels import keep_names
 from shardfold.ids import ObjectInfo, RowGroup, Shard
 from shardfold.readers.batch import Batch, ByteSource, Fetched, one_by_one, refused
-from shardfold.readers.times import Grid, TimeRule, grid_of
+from shardfold.readers.grids import Grid, TimeRule, grid_of
 from shardfold.readers.vector import channel_names, places
 
 GROUP_BYTES = 8 * 2**20

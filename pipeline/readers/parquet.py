@@ -1,7 +1,8 @@
 """Parquet shards of either layout: footer -> described shard, row group -> batch.
 
 What a row group's columns become is the layout's part (``wide``, ``vector``); which bytes are fetched is
-``footer``'s. Here they are put together with the times, and what was promised is held against what came.
+``footer``'s and ``rowgroup``'s. Here they are put together with the times, and what was promised is held against what
+came.
 """
 
 from __future__ import annotations
@@ -24,18 +25,10 @@ from shardfold.readers.batch import (
     some_names,
 )
 from shardfold.readers.columns import Columns
-from shardfold.readers.footer import Footer, open_group, read_footer, refusing, slices, spans_to_read
-from shardfold.readers.times import (
-    ColumnRule,
-    Grid,
-    TimeFault,
-    TimeRule,
-    Times,
-    column_times,
-    grid_of,
-    is_time_type,
-    statistics_span,
-)
+from shardfold.readers.footer import Footer, read_footer, refusing, spans_to_read
+from shardfold.readers.grids import ColumnRule, Grid, TimeRule, grid_of
+from shardfold.readers.rowgroup import open_group, slices
+from shardfold.readers.times import TimeFault, Times, column_times, is_time_type, statistics_span
 
 _TIME_BYTES = 8
 

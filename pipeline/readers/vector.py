@@ -19,7 +19,8 @@ from shardfold.channels import keep_names
 from shardfold.ids import ObjectInfo
 from shardfold.readers.batch import refused
 from shardfold.readers.columns import Columns, numeric_dtype
-from shardfold.readers.footer import Footer, gap_dtype, slices
+from shardfold.readers.footer import Footer, gap_dtype
+from shardfold.readers.rowgroup import slices
 
 _LENGTH_RULE = "every row holds one list, all of one length"
 

@@ -15,7 +15,8 @@ from numpy.typing import NDArray
 from shardfold.channels import keep_names
 from shardfold.readers.batch import refused
 from shardfold.readers.columns import Columns, numeric_dtype
-from shardfold.readers.footer import SLICE_BYTES, Footer, gap_dtype, slices
+from shardfold.readers.footer import Footer, gap_dtype
+from shardfold.readers.rowgroup import SLICE_BYTES, slices
 
 # Measured: one column a call costs a fifth more time, 256 hold half of the row group twice.
 COLUMNS_AT_ONCE = 8

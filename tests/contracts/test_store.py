@@ -179,7 +179,8 @@ def test_a_listing_holds_what_begins_with_its_prefix_and_nothing_else(place: Sto
     keys = ["a", "ab", "a.d/e", "b/c", "b/c.d/e", "bc"] if place.endpoint is None else ["ab", "b/c.d/e", "bc"]
     for key in keys:
         store.put(key, b"x")
-    open_store(f"{place.location}-neighbour", place.endpoint).put("a", b"x") if place.endpoint else None
+    if place.endpoint is not None:
+        open_store(f"{place.location}-neighbour", place.endpoint).put("a", b"x")
     for prefix in ("", "a", "b/", "b/c", "b/c.d/", "none/"):
         assert sorted(info.key for info in store.list(prefix)) == sorted(k for k in keys if k.startswith(prefix))
 

@@ -21,7 +21,7 @@ import pytest
 from conftest import Bucket
 from sniffing_proxy import SniffingProxy
 
-from shardfold import store_local, store_promises
+from shardfold import store_promises
 from shardfold.errors import AccessDenied, InputError, NothingToRead, ShardfoldError, StorageFailed, VersionChanged
 from shardfold.store import Counting, Created, open_store
 
@@ -181,7 +181,7 @@ def test_an_object_replaced_between_the_requests_of_one_read_is_never_mixed(
     for pinned in (version, None):
         other.put("data", DATA)
         proxy.forget()
-        proxy.before = lambda method, path: proxy.count("GET", "data") == 5 and other.put("data", DATA[::-1])
+        proxy.before = lambda method, path: other.put("data", DATA[::-1]) if proxy.count("GET", "data") == 5 else None
         with pytest.raises(VersionChanged, match="replaced") as caught:
             store.read("data", version=pinned)
         assert caught.value.exit_status == 4
@@ -347,7 +347,7 @@ def test_faults_of_a_file_system_leave_nothing_half_written(
         raise OSError(number, os.strerror(number))
 
     store = open_store(str(tmp_path), sleep=sleeps)
-    monkeypatch.setattr(store_local.os, "fsync", fail)
+    monkeypatch.setattr(os, "fsync", fail)
     for write in (store.create, store.put):
         sleeps.clear()
         with pytest.raises(ShardfoldError, match=errno.errorcode[number]) as caught:
@@ -370,6 +370,6 @@ def test_a_local_file_that_changes_while_it_is_read_is_found_out(
             os.utime(path, ns=(1, 1))
         return preadv(descriptor, buffers, offset)
 
-    monkeypatch.setattr(store_local.os, "preadv", meddle)
+    monkeypatch.setattr(os, "preadv", meddle)
     with pytest.raises(VersionChanged, match="replaced"):
         open_store(str(tmp_path)).read("k")

@@ -58,7 +58,7 @@ def test_rank_ten_plus_white_noise(lab: Any) -> None:
 def test_the_next_probe_has_unit_rows_exact_in_single_precision(lab: Any) -> None:
     folded = lab.fold(lab.with_spectrum(300, 200, 1 / J[:100]) + 2, 30)
     rows = factors.next_probe(folded.summary, RANK, 1, 2, folded.keys)
-    assert rows.shape == (factors.next_width(30, RANK), 300)
+    assert rows.shape == (factors.probe_width(30, RANK), 300)
     assert np.array_equal(rows, rows.astype(np.float32))
     np.testing.assert_allclose(np.linalg.norm(rows, axis=1), 1, rtol=1e-6)
     np.testing.assert_allclose(rows[:30] @ rows[:30].T, np.eye(30), atol=1e-6)

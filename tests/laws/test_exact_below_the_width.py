@@ -102,7 +102,7 @@ def test_nothing_below_the_floor_is_a_mode(lab: Any) -> None:
     for width in (None, 20):
         matrix = lab.with_spectrum(45, 100, values)
         made = factors.finish(lab.fold(matrix, width).summary)
-        assert made.floor == pytest.approx(2 * np.sqrt(EPS), rel=1e-3)
+        assert made.floor == pytest.approx(np.sqrt(factors.FLOOR_ULPS * EPS), rel=1e-3)
         assert made.values.min() > made.floor
         np.testing.assert_allclose(made.values[:3], values[:3], rtol=1e-2)
         assert made.values.size <= 6  # three real ones and at most a little noise just above the floor
