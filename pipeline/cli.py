@@ -225,7 +225,7 @@ def _print_report(report: Report, job: Job, quiet: bool) -> None:
         )
     click.echo(report.location)
     if report.standing_refused:
-        click.echo(f"{report.standing_refused} shards stay refused", err=True)
+        click.echo(f"shards refused before and still: {report.standing_refused}", err=True)
 
 
 def _print_result(result: Result, quiet: bool) -> None:

@@ -15,6 +15,7 @@ import subprocess
 import sys
 import tempfile
 import time
+from contextlib import suppress
 from pathlib import Path
 from types import TracebackType
 from typing import Any
@@ -79,8 +80,10 @@ class Seaweed:
         self._keep = folder is not None
         self.folder = Path(tempfile.mkdtemp(prefix="seaweed-")) if folder is None else folder
         self.folder.mkdir(parents=True, exist_ok=True)
+        self._sockets = Path(tempfile.mkdtemp(prefix="sf-s3-"))  # short: paths of sockets may have 107 characters
         self.access_key, self.secret_key = uuid4().hex, uuid4().hex
-        master, volume, filer, s3 = free_ports(4)
+        self._ports = free_ports(4)
+        master, volume, filer, s3 = self._ports
         self.endpoint = f"http://{LOOPBACK}:{s3}"
         self._client = self._connect()
         self._write_identities()
@@ -90,6 +93,8 @@ class Seaweed:
             stdout=self._log,
             stderr=subprocess.STDOUT,
             stdin=subprocess.DEVNULL,
+            # A bucket takes seven volumes by default, of a number that depends on the free disk: eleven buckets, here.
+            env={**os.environ, "WEED_MASTER_VOLUME_GROWTH_COPY_1": "1"},
             start_new_session=True,
         )
         try:
@@ -111,8 +116,12 @@ class Seaweed:
         }
 
     def make_bucket(self, name: str) -> None:
-        """Make a bucket."""
+        """Make a bucket; its first object takes half a second more than the next ones."""
         self._client.create_bucket(Bucket=name)
+
+    def delete_bucket(self, name: str) -> None:
+        """Delete a bucket with all that is in it."""
+        self._client.delete_bucket(Bucket=name)
 
     def stop(self) -> None:
         """Kill the server; it does not end by SIGTERM within 15 s."""
@@ -122,6 +131,11 @@ class Seaweed:
         self._log.close()
         if not self._keep:
             shutil.rmtree(self.folder, ignore_errors=True)
+        shutil.rmtree(self._sockets, ignore_errors=True)
+        # The gRPC sockets have a fixed folder and are named by the port.
+        for port in self._ports:
+            for path in Path("/tmp").glob(f"seaweedfs-*-{port + 10_000}.sock"):
+                path.unlink(missing_ok=True)
 
     def __enter__(self) -> Seaweed:
         return self
@@ -163,8 +177,10 @@ class Seaweed:
             f"-volume.port={volume}",
             "-filer",
             f"-filer.port={filer}",
+            f"-filer.localSocket={self._sockets}/filer.sock",
             "-s3",
             f"-s3.port={s3}",
+            f"-s3.localSocket={self._sockets}/s3.sock",
             "-s3.port.iceberg=0",
             "-s3.port.lance=0",
             f"-s3.config={folder}/s3.json",
@@ -175,13 +191,13 @@ class Seaweed:
     def _wait_ready(self) -> None:
         """Wait until the S3 door answers a signed request; it opens its port before that."""
         deadline = time.monotonic() + READY_SECONDS
-        while time.monotonic() < deadline and self._process.poll() is None:
-            try:
+        while time.monotonic() < deadline:
+            with suppress(BotoCoreError, ClientError):
                 self._client.list_buckets()
-            except (BotoCoreError, ClientError):
-                time.sleep(0.05)
-            else:
                 return
+            with suppress(subprocess.TimeoutExpired):
+                self._process.wait(0.05)
+                break
         log = (self.folder / "server.log").read_text(errors="replace")[-2000:]
         raise StorageFailed(
             "the local S3 server did not get ready",

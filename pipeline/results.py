@@ -159,7 +159,8 @@ def open_result(location: str, endpoint: str | None = None) -> Result:
     Parameters
     ----------
     location : str
-        The folder of a result, or ``DOSSIER/latest``: the highest ledger number.
+        The folder of a result, or ``DOSSIER/latest``: the highest ledger number among the results that are the job's
+        own, not made with ``--set modes...``.
     endpoint : str, optional
         URL of the S3 service, where it is not in the environment.
 
@@ -184,9 +185,11 @@ def _latest(store: Store, location: str) -> str:
         for info in store.list(layout.RESULTS)
         if (parsed := layout.parse_manifest(info.key)) is not None
     ]
-    if not found:
-        raise _no_result(location, "no published result")
-    return max(found)[2]
+    for _, _, folder in sorted(found, reverse=True):
+        if not json.loads(bytes(store.read(folder + layout.MANIFEST))).get("set"):
+            return folder
+    only_set = f"only results made with --set, such as {max(found)[2]}" if found else "no published result"
+    raise _no_result(location, only_set)
 
 
 def _no_result(location: str, got: str) -> InputError:

@@ -245,6 +245,7 @@ def _publish(
         "id": result_id,
         "ledger_number": intake.ledger.number,
         "quality": quality(finding),
+        "set": [o for o in site.job.overrides if o.partition("=")[0].partition(".")[0].strip() == "modes"],
         "blas": sorted(intake.cores | {core_type()}),
         "shards": _shard_records(site, intake),
     }

@@ -57,9 +57,9 @@ def with_spectrum(channels: int, samples: int, values: Array, seed: int = 0) -> 
 
 
 def put_table(store: Store, key: str, columns: dict[str, Any], row_group: int | None = None) -> None:
-    """Write one Parquet object."""
+    """Write one Parquet object, plainly encoded: random numbers do not compress, and trying takes time."""
     sink = pa.BufferOutputStream()
-    pq.write_table(pa.table(columns), sink, row_group_size=row_group)
+    pq.write_table(pa.table(columns), sink, row_group_size=row_group, compression="none", use_dictionary=False)
     store.put(key, bytes(sink.getvalue()))
 
 

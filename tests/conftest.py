@@ -15,8 +15,9 @@ import pytest
 # Tests are imported by path (--import-mode=importlib); the two helpers beside this file are modules of their own.
 sys.path.insert(0, str(Path(__file__).parent))
 
-from seaweed import Seaweed
 from sniffing_proxy import SniffingProxy
+
+from shardfold.local_s3 import Seaweed
 
 
 @dataclass(frozen=True)

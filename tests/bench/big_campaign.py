@@ -8,55 +8,62 @@ shards made of the same block.
 from __future__ import annotations
 
 import io
+from argparse import ArgumentParser, Namespace
 from collections.abc import Iterator
-from concurrent.futures import ThreadPoolExecutor
+from concurrent.futures import ProcessPoolExecutor, ThreadPoolExecutor
 from dataclasses import dataclass
+from multiprocessing import get_context
 
 import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
-from shardfold.store import Store
+
+from shardfold.store import open_store
 
 START_NS = 1_932_000_000_000_000_000
 STEP_NS = 10_000_000
 POOL = 4
 WRITERS = 2
+ORIENT = "samples_by_channels"
 
 
 @dataclass(frozen=True)
 class Campaign:
-    """What to write: shards of whole row groups."""
+    """What to write: shards of whole row groups, about so many bytes of values in all.
+
+    Ten milliseconds apart, shards of 6,000 or 12,000 samples are whole minutes, and no row group crosses a leaf's edge.
+    """
 
     layout: str
     channels: int
-    total_bytes: int
-    shard_bytes: int
-    group_bytes: int
+    total_bytes: float
+    shard_rows: int
+    group_rows: int
     dtype: str = "float32"
     compression: str = "none"
     orient: str = "samples_by_channels"
 
     @property
-    def group_rows(self) -> int:
-        """Return the samples of a row group, a power of two."""
-        rows = self.group_bytes // (self.channels * np.dtype(self.dtype).itemsize)
-        return 1 << max(6, rows.bit_length() - 1)
-
-    @property
-    def shard_rows(self) -> int:
-        """Return the samples of a shard: whole row groups."""
-        rows = self.shard_bytes // (self.channels * np.dtype(self.dtype).itemsize)
-        return max(1, rows // self.group_rows) * self.group_rows
+    def shard_bytes(self) -> int:
+        """Return the bytes of the values of a shard."""
+        return self.shard_rows * self.channels * np.dtype(self.dtype).itemsize
 
     @property
     def shards(self) -> int:
         """Return the number of shards."""
-        return max(1, self.total_bytes // (self.shard_rows * self.channels * np.dtype(self.dtype).itemsize))
+        return max(1, round(self.total_bytes / self.shard_bytes))
 
     @property
     def values_bytes(self) -> int:
         """Return the bytes of all values."""
-        return self.shards * self.shard_rows * self.channels * np.dtype(self.dtype).itemsize
+        return self.shards * self.shard_bytes
+
+    def __str__(self) -> str:
+        """Say what is written."""
+        return (
+            f"{self.layout} {self.dtype}, compression {self.compression}: {self.shards} shards of {self.shard_rows} "
+            f"samples x {self.channels} channels, row groups of {self.group_rows}; {self.values_bytes / 1e9:.2f} GB"
+        )
 
     def source(self, location: str, endpoint: str) -> str:
         """Return the ``source`` block of a job."""
@@ -67,8 +74,41 @@ class Campaign:
         return f"{{{keys}, layout: {self.layout}, time: t{', values: v' if self.layout == 'vector' else ''}}}"
 
 
-def write(store: Store, campaign: Campaign) -> int:
+def options(parser: ArgumentParser, gigabytes: float) -> None:
+    """Add the options that say what is written."""
+    parser.add_argument("--layout", choices=("vector", "wide", "array"), default="vector")
+    parser.add_argument("--orient", choices=("samples_by_channels", "channels_by_samples"), default=ORIENT)
+    parser.add_argument("--gb", type=float, default=gigabytes, help="bytes of all values, in 1e9")
+    parser.add_argument("--channels", type=int, default=3000)
+    parser.add_argument("--shard-rows", type=int, default=12_000)
+    parser.add_argument("--group-rows", type=int, default=4_000)
+    parser.add_argument("--dtype", default="float32")
+    parser.add_argument("--compression", default="none")
+
+
+def chosen(given: Namespace, compression: str = "") -> Campaign:
+    """Return the campaign that the options describe."""
+    return Campaign(
+        given.layout,
+        given.channels,
+        given.gb * 1e9,
+        given.shard_rows,
+        given.group_rows,
+        given.dtype,
+        compression or given.compression,
+        given.orient,
+    )
+
+
+def write_apart(location: str, endpoint: str, campaign: Campaign) -> int:
+    """Write the shards from another process, which takes its memory with it; return their bytes."""
+    with ProcessPoolExecutor(1, mp_context=get_context("spawn")) as pool:
+        return pool.submit(write, location, endpoint, campaign).result()
+
+
+def write(location: str, endpoint: str, campaign: Campaign) -> int:
     """Write the shards, two at a time, and return their bytes."""
+    store = open_store(location, endpoint, "us-east-1")
     pool = list(_blocks(campaign))
     make = _npy if campaign.layout == "array" else _parquet
 
@@ -135,4 +175,3 @@ def _npy(campaign: Campaign, times: np.ndarray, blocks: list[np.ndarray]) -> tup
     sink = io.BytesIO()
     np.save(sink, values if campaign.orient == "samples_by_channels" else np.ascontiguousarray(values.T))
     return f"at-{times[0]}.npy", sink.getbuffer()
-

@@ -15,77 +15,52 @@ from pathlib import Path
 
 sys.path.insert(0, str(Path(__file__).parents[1]))
 
-from big_campaign import Campaign, write
+import big_campaign
 from process_memory import Peaks, Sampler
-from seaweed import Seaweed
+from shardfold.local_s3 import Seaweed
+
 from shardfold import budget
 from shardfold.events import StageDone, StageStarted
 from shardfold.executor_ray import RayExecutor
 from shardfold.job import Job, parse_job
+from shardfold.plan import cut
 from shardfold.run import run
 from shardfold.site import look
-from shardfold.plan import cut
-from shardfold.store import open_store
 
+CAMPAIGN = "s3://bench/campaign"
 MIB = 2**20
 
 
 def main() -> None:
     """Print one table, and fail where plan and reality are apart."""
-    options = _options()
-    campaign = Campaign(
-        options.layout,
-        options.channels,
-        int(options.gb * 1e9),
-        int(options.shard_mib * MIB),
-        int(options.group_mib * MIB),
-        options.dtype,
-        options.compression,
-        options.orient,
-    )
-    with Seaweed() as server:
-        os.environ.update(server.environment)
-        server.make_bucket("bench")
-        store = open_store("s3://bench/campaign", server.endpoint, "us-east-1")
-        begin = time.perf_counter()
-        stored = write(store, campaign)
-        print(
-            f"{campaign.layout} {campaign.dtype} {campaign.compression}: {campaign.shards} shards of "
-            f"{campaign.shard_rows} samples x {campaign.channels} channels, row groups of {campaign.group_rows}; "
-            f"{campaign.values_bytes / 1e9:.2f} GB of values, {stored / 1e9:.2f} GB stored "
-            f"(written in {time.perf_counter() - begin:.0f} s)"
-        )
-        job = _job(campaign, server.endpoint, options)
-        peaks, seconds = _measure(job, options.workers)
-        plan = _plan(job, options.workers)
-    print(f"run: {seconds:.1f} s, {campaign.values_bytes / seconds / 1e6:.0f} MB/s; {peaks.samples} samples of memory")
-    sys.exit(0 if _print_table(plan, peaks, options.memory) else 1)
-
-
-def _options() -> argparse.Namespace:
     parser = argparse.ArgumentParser(description=__doc__)
-    parser.add_argument("--layout", choices=("vector", "wide", "array"), default="vector")
-    parser.add_argument("--orient", choices=("samples_by_channels", "channels_by_samples"), default="samples_by_channels")
-    parser.add_argument("--gb", type=float, default=6.0, help="values in all")
-    parser.add_argument("--channels", type=int, default=3000)
-    parser.add_argument("--dtype", default="float32")
-    parser.add_argument("--compression", default="none")
-    parser.add_argument("--shard-mib", type=float, default=150)
-    parser.add_argument("--group-mib", type=float, default=48)
+    big_campaign.options(parser, gigabytes=6.0)
     parser.add_argument("--memory", default="600 MiB", help="engine.memory")
     parser.add_argument("--workers", type=int, default=2)
     parser.add_argument("--set", action="append", default=[], help="key=value of the job")
-    return parser.parse_args()
+    given = parser.parse_args()
+    campaign = big_campaign.chosen(given)
+    with Seaweed() as server:
+        os.environ.update(server.environment)
+        server.make_bucket("bench")
+        begin = time.perf_counter()
+        stored = big_campaign.write_apart(CAMPAIGN, server.endpoint, campaign)
+        print(f"{campaign}, {stored / 1e9:.2f} GB stored (written in {time.perf_counter() - begin:.0f} s)")
+        job = _job(campaign, server.endpoint, given)
+        peaks, seconds = _measure(job, given.workers)
+        plan = _plan(job, given.workers)
+    print(f"run: {seconds:.1f} s, {campaign.values_bytes / seconds / 1e6:.0f} MB/s; {peaks.samples} samples of memory")
+    sys.exit(0 if _print_table(plan, peaks, given.memory) else 1)
 
 
-def _job(campaign: Campaign, endpoint: str, options: argparse.Namespace) -> Job:
+def _job(campaign: big_campaign.Campaign, endpoint: str, given: argparse.Namespace) -> Job:
     text = f"""
 campaign: memory
-source: {campaign.source("s3://bench/campaign", endpoint)}
+source: {campaign.source(CAMPAIGN, endpoint)}
 dossier: {{location: s3://bench/dossier, storage: {{endpoint: '{endpoint}', region: us-east-1}}}}
-engine: {{memory: {options.memory}, workers: {options.workers}}}
+engine: {{memory: {given.memory}, workers: {given.workers}}}
 """
-    return parse_job(text, "bench.yaml", options.set)
+    return parse_job(text, "bench.yaml", given.set)
 
 
 def _measure(job: Job, workers: int) -> tuple[Peaks, float]:

@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 import pytest
 from campaigns import FROM_NAME, STEP_NS, Found, even_times, job_text, run_job, write_array, write_vector, write_wide
+
 from shardfold.store import open_store
 
 KEEP_MEAN: dict[str, Any] = {"remove": []}
@@ -202,10 +203,9 @@ def wave(points: int, samples: int, waves: int, cycles: int, backwards: float) -
     return np.cos(x - t) + backwards * np.cos(x + t)
 
 
-@pytest.mark.parametrize("backwards", [0.0, 0.5])
 @pytest.mark.parametrize(
-    ("points", "design", "reads"),
-    [(48, {}, 1), (240, {"width": 12}, 1), (240, {"width": 12}, 2)],
+    ("points", "design", "reads", "backwards"),
+    [(48, {}, 1, 0.0), (240, {"width": 12}, 1, 0.5), (240, {"width": 12}, 2, 0.0)],
     ids=["identity", "one-read", "two-reads"],
 )
 def test_travelling_wave(shore: Shore, points: int, design: dict[str, Any], reads: int, backwards: float) -> None:

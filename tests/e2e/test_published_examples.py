@@ -14,8 +14,9 @@ import pyarrow as pa
 import pyarrow.csv as pa_csv
 import pytest
 from campaigns import Found, job_text, put_table, run_job, write_array, write_vector
-from shardfold.store import Store, open_store
 from sklearn.datasets import load_digits, load_iris
+
+from shardfold.store import Store, open_store
 
 US_ARRESTS = Path(__file__).parents[1] / "data" / "us_arrests.csv"
 COMMENT_LINES = 3

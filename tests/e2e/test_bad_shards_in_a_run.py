@@ -1,0 +1,336 @@
+"""A shard that cannot be trusted is refused by name, place, rule and value; all others are taken in; nothing is lost.
+
+Each case goes through the command: the run that meets the shard exits 3, the next one 0 with the case counted as
+standing, and once the shard is mended the result is that of the whole campaign. Singular values are NumPy's.
+"""
+
+from __future__ import annotations
+
+import io
+import os
+import pickle
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pyarrow as pa
+import pytest
+from terminal import KEYS, ROWS, SHARDS, Desk, field, good, parquet, times, wide
+
+from shardfold.store import open_store
+from shardfold.store_local import LocalAdapter
+
+BAD = 1
+T, F = times()[BAD * ROWS : (BAD + 1) * ROWS], field()[BAD * ROWS : (BAD + 1) * ROWS]
+REST = np.delete(field(), np.s_[BAD * ROWS : (BAD + 1) * ROWS], axis=0)
+NPY_KEYS = tuple(f"run-20310323T024{number}00.npy" for number in range(SHARDS))
+
+
+def with_value(value: float) -> np.ndarray:
+    """Return the values of the bad shard with one of them replaced."""
+    values = F.copy()
+    values[17, 7] = value
+    return values
+
+
+def npy(values: np.ndarray) -> bytes:
+    """Return an array as a ``.npy`` file."""
+    sink = io.BytesIO()
+    np.save(sink, values)
+    return sink.getvalue()
+
+
+@pytest.fixture
+def desk(tmp_path: Path) -> Desk:
+    return Desk(tmp_path).write_all()
+
+
+@pytest.fixture
+def arrays(tmp_path: Path) -> Desk:
+    """The same campaign as four arrays whose names hold their first times."""
+    made = Desk(tmp_path)
+    made.write_job(source={"layout": "array", "time": {"from_name": r"(\d{8}T\d{6})", "step": "1 s"}})
+    for number, key in enumerate(NPY_KEYS):
+        made.write(key, npy(field()[number * ROWS : (number + 1) * ROWS]))
+    return made
+
+
+def assert_refused_alone(desk: Desk, keys: tuple[str, ...], words: list[str], mended: Any) -> None:
+    """Run, run again, mend, run: the shard alone is left out, once told, and nothing of it is lost in the end."""
+    bad = keys[BAD]
+    answer = desk.run("--quiet")
+    assert answer.status == 3
+    answer.says(f"refused {bad}: ", *words)
+    assert desk.shards_in() == [key for key in keys if key != bad]
+    desk.assert_holds(REST)
+    desk.assert_intact()
+    again = desk.run("--json", "--quiet")
+    assert (again.status, again.err) == (0, "")
+    counts = {name: again.document[name] for name in ("newly_refused", "standing_refused", "cells_read", "new")}
+    assert counts == {"newly_refused": 0, "standing_refused": 1, "cells_read": 0, "new": False}
+    desk.write(bad, mended)
+    assert desk.run("--quiet").status == 0
+    assert desk.shards_in() == list(keys)
+    desk.assert_holds(field())
+    desk.assert_intact()
+
+
+PARQUET_CASES: dict[str, tuple[Callable[[], Any], list[str]]] = {
+    "no time column": (
+        lambda: wide(T, F, t=None),
+        ["there is no time column 't'", "columns G000, G001", "source.time", "remedy: "],
+    ),
+    "a channel of text": (
+        lambda: wide(T, F, G007=pa.array(["on"] * ROWS)),
+        ["not numeric", "'G007' of type string", "source.channels.exclude"],
+    ),
+    "a channel missing": (
+        lambda: wide(T, F, G007=None),
+        ["the same 40 channels", "39 channels; missing G007", "remedy: "],
+    ),
+    "a channel too many": (
+        lambda: wide(T, F, G099=pa.array(np.zeros(ROWS))),
+        ["the same 40 channels", "41 channels; not expected G099", "remedy: "],
+    ),
+    "NaN": (
+        lambda: wide(T, with_value(np.nan)),
+        ["channel G007 is nan at 2031-03-23T02:41:17Z", "design.gaps: refuse", "remedy: "],
+    ),
+    "infinity": (
+        lambda: wide(T, with_value(-np.inf)),
+        ["channel G007 is -inf at 2031-03-23T02:41:17Z", "design.gaps: refuse"],
+    ),
+    "null": (
+        lambda: wide(T, F, G007=pa.array([None if row == 17 else 0.5 for row in range(ROWS)])),
+        ["channel G007 is nan at 2031-03-23T02:41:17Z"],
+    ),
+    "a time missing": (
+        lambda: wide(T, F, t=pa.array([None, *T[1:].tolist()], pa.timestamp("ns", tz="UTC"))),
+        ["column 't', row 0", "remedy: "],
+    ),
+    "zero bytes": (lambda: b"", ["the shard is empty", "got: 0 bytes", "copy the shard again"]),
+    "cut at its end": (lambda: parquet(wide(T, F))[:-300], ["cut short, or is not Parquet", "copy the shard again"]),
+    "all but its first bytes lost": (lambda: parquet(wide(T, F))[:10], ["cut short, or is not Parquet"]),
+    "its middle lost": (
+        lambda: b"PAR1" + bytes(3000) + parquet(wide(T, F))[3004:],
+        ["row group 0", "cannot be decoded", "copy the shard again"],
+    ),
+    "no rows": (lambda: wide(T[:0], F[:0]), ["the shard holds no samples", "got: 0 rows"]),
+}
+
+
+@pytest.mark.parametrize("case", PARQUET_CASES)
+def test_a_bad_parquet_shard_is_refused_alone(desk: Desk, case: str) -> None:
+    spoiled, words = PARQUET_CASES[case]
+    desk.write(KEYS[BAD], spoiled())
+    assert_refused_alone(desk, KEYS, words, good(BAD))
+
+
+NPY_CASES: dict[str, tuple[Callable[[], bytes], list[str]]] = {
+    "zero bytes": (lambda: b"", ["the shard is empty", "0 bytes"]),
+    "cut short": (lambda: npy(F)[:-100], ["the array is cut short", f"rule: {128 + F.nbytes} bytes", f"{28 + F.nbytes}"]),
+    "cut in its header": (lambda: npy(F)[:20], [".npy header cannot be read"]),
+    "three dimensions": (lambda: npy(F[None]), ["two dimensions", "shape (1, 60, 40)"]),
+    "complex numbers": (lambda: npy(F + 1j), ["integers or floats", "complex128"]),
+    "another number of channels": (lambda: npy(F[:, :39]), ["39 channels; missing ch00039"]),
+    "NaN": (lambda: npy(with_value(np.nan)), ["channel ch00007 is nan at 2031-03-23T02:41:17Z"]),
+}
+
+
+@pytest.mark.parametrize("case", NPY_CASES)
+def test_a_bad_array_is_refused_alone(arrays: Desk, case: str) -> None:
+    spoiled, words = NPY_CASES[case]
+    arrays.write(NPY_KEYS[BAD], spoiled())
+    assert_refused_alone(arrays, NPY_KEYS, words, npy(F))
+
+
+class Trap:
+    """Makes a file when it is unpickled."""
+
+    def __init__(self, path: Path) -> None:
+        self.path = path
+
+    def __reduce__(self) -> Any:
+        return os.mkdir, (str(self.path),)
+
+
+@pytest.mark.parametrize("form", ["an array of objects", "a bare pickle"])
+def test_pickled_objects_are_never_loaded(arrays: Desk, form: str) -> None:
+    trap = arrays.folder / "sprung"
+    values = np.empty(F.shape, object)
+    values[:] = Trap(trap)
+    payload = npy(values) if form == "an array of objects" else pickle.dumps(Trap(trap))
+    words = ["pickled Python objects are never loaded"] if form == "an array of objects" else ["cannot be read"]
+    arrays.write(NPY_KEYS[BAD], payload)
+    assert_refused_alone(arrays, NPY_KEYS, words, npy(F))
+    assert not trap.exists()
+
+
+def test_the_payload_of_the_test_above_would_have_gone_off(tmp_path: Path) -> None:
+    pickle.loads(pickle.dumps(Trap(tmp_path / "sprung")))  # noqa: S301
+    assert (tmp_path / "sprung").exists()
+
+
+def test_a_campaign_of_bad_shards_only_ends_without_a_dossier(desk: Desk) -> None:
+    for key in KEYS:
+        desk.write(key, b"")
+    answer = desk.run()
+    assert answer.status == 2
+    answer.says("no shard can be read", "4 refused", "part-0.parquet", "the shard is empty", "remedy: ")
+    assert not desk.dossier.exists()
+    desk.write_all()
+    assert desk.run().status == 0
+
+
+def test_values_that_are_bad_everywhere_end_the_run(desk: Desk) -> None:
+    for number, key in enumerate(KEYS):
+        desk.write(key, wide(times()[number * ROWS :][:ROWS], with_value(np.nan)))
+    answer = desk.run()
+    assert answer.status == 2
+    answer.says("no shard can be taken in", "4 refused", "channel G007 is nan at 2031-03-23T02:40:17Z")
+    desk.write_all()
+    assert desk.run().status == 0
+    desk.assert_holds(field())
+
+
+def test_many_refusals_are_told_in_full_only_at_first(desk: Desk) -> None:
+    for number in range(30):
+        desk.write(f"z{number:02d}.parquet", b"")
+    answer = desk.run()
+    assert answer.status == 3
+    assert answer.err.count("refused z") == 30
+    assert answer.err.count("remedy: ") == 20
+
+
+class Replacing:
+    """Lets something happen to one key just before it is read for the n-th time."""
+
+    def __init__(self, monkeypatch: pytest.MonkeyPatch, key: str, number: int, happen: Callable[[], Any]) -> None:
+        real, left = LocalAdapter.read, [number]
+
+        def read(adapter: LocalAdapter, asked: str, version: str | None, start: int, stop: int | None) -> memoryview:
+            if asked == key:
+                left[0] -= 1
+                if left[0] == 0:
+                    happen()
+            return real(adapter, asked, version, start, stop)
+
+        monkeypatch.setattr(LocalAdapter, "read", read)
+
+
+@pytest.mark.parametrize("moment", [2, 3], ids=["before its footer is read again", "between footer and values"])
+def test_a_shard_replaced_while_it_is_read(desk: Desk, monkeypatch: pytest.MonkeyPatch, moment: int) -> None:
+    """The first read of its footer is the inventory's. The next run takes the version that is there then."""
+    newer = field()
+    newer[BAD * ROWS : (BAD + 1) * ROWS] *= 2
+    Replacing(monkeypatch, KEYS[BAD], moment, lambda: desk.write(KEYS[BAD], wide(T, 2 * F)))
+    answer = desk.run("--quiet")
+    assert answer.status == 3
+    answer.says(f"refused {KEYS[BAD]}: ", "replaced or removed while it was read", "remedy: run again")
+    desk.assert_holds(REST)
+    desk.assert_intact()
+    again = desk.run("--quiet", "--json")
+    assert again.status == 0
+    assert (again.document["cells_read"], again.document["standing_refused"]) == (1, 0)
+    desk.assert_holds(newer)
+
+
+def test_a_shard_replaced_while_it_is_described_is_left_for_the_next_run(
+    desk: Desk, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    Replacing(monkeypatch, KEYS[BAD], 1, lambda: desk.write(KEYS[BAD], good(BAD)))
+    answer = desk.run()
+    assert answer.status == 0
+    answer.says(f"1 shard ({KEYS[BAD]}) left for the next run", "replaced just now")
+    desk.assert_holds(REST)
+    assert desk.run().status == 0
+    desk.assert_holds(field())
+
+
+def test_a_shard_removed_while_it_is_read(desk: Desk, monkeypatch: pytest.MonkeyPatch) -> None:
+    Replacing(monkeypatch, KEYS[BAD], 2, (desk.campaign / KEYS[BAD]).unlink)
+    answer = desk.run("--quiet")
+    assert answer.status == 3
+    answer.says(f"refused {KEYS[BAD]}: ", "replaced or removed while it was read", "no object")
+    desk.assert_holds(REST)
+    assert desk.run().status == 0
+
+
+FURTHER_READINGS = {"coefficients of a narrow campaign": {"width": None}, "a second read": {"width": 12}}
+
+
+@pytest.mark.parametrize("what", FURTHER_READINGS)
+def test_a_shard_replaced_before_a_further_reading(desk: Desk, monkeypatch: pytest.MonkeyPatch, what: str) -> None:
+    """Nothing is published from two versions; the same command goes on with the new one."""
+    desk.write_job(design=FURTHER_READINGS[what], modes={"reads": 2})
+    newer = field()
+    newer[BAD * ROWS : (BAD + 1) * ROWS] *= 2
+    Replacing(monkeypatch, KEYS[BAD], 4, lambda: desk.write(KEYS[BAD], wide(T, 2 * F)))
+    answer = desk.run("--quiet")
+    assert answer.status == 4
+    answer.says(f"{KEYS[BAD]}: a shard changed between", "nothing was published", "run again")
+    desk.assert_intact()
+    assert not list(desk.dossier.glob("results/*/manifest.json"))
+    assert desk.run("--quiet").status == 0
+    desk.assert_holds(newer)
+
+
+@pytest.mark.parametrize("what", FURTHER_READINGS)
+def test_a_shard_that_vanished_and_is_needed_again(desk: Desk, monkeypatch: pytest.MonkeyPatch, what: str) -> None:
+    desk.write_job(design=FURTHER_READINGS[what], modes={"reads": 2})
+    Replacing(monkeypatch, KEYS[BAD], 4, (desk.campaign / KEYS[BAD]).unlink)
+    assert desk.run("--quiet").status == 4
+    answer = desk.run("--quiet")
+    assert answer.status == 2
+    answer.says(f"{KEYS[BAD]}: a shard that is in has vanished", "put the shard back", "or start a new dossier")
+    desk.write(KEYS[BAD], good(BAD))
+    assert desk.run("--quiet").status == 0
+    desk.assert_holds(field())
+
+
+def test_an_object_replaced_while_it_is_read_from_s3(desk: Desk, folder: Any, proxy: Any) -> None:
+    direct = open_store(f"{folder.location}/campaign", folder.endpoint)
+    for number, key in enumerate(KEYS):
+        direct.put(key, parquet(good(number)))
+    left = [2]
+
+    def replace(method: str, path: str) -> None:
+        if method == "GET" and path.endswith(f"/{KEYS[BAD]}"):
+            left[0] -= 1
+            if left[0] == 0:
+                direct.put(KEYS[BAD], parquet(wide(T, 2 * F)))
+
+    proxy.before = replace
+    desk.write_job(source={"location": f"{folder.location}/campaign", "storage": {"endpoint": proxy.endpoint}})
+    answer = desk.run("--quiet")
+    assert answer.status == 3
+    answer.says(f"refused {KEYS[BAD]}: ", "replaced or removed while it was read", "remedy: run again")
+    desk.assert_holds(REST)
+    assert desk.run("--quiet").status == 0
+    assert desk.shards_in() == list(KEYS)
+
+
+def test_a_shard_still_being_written_is_left_for_the_next_run(desk: Desk) -> None:
+    """It is half there and young; not looked into, not refused."""
+    desk.write_job(source={"settle": "10 min"})
+    for key in KEYS:
+        os.utime(desk.campaign / key, (1_900_000_000 - 86_400,) * 2)
+    desk.write(KEYS[BAD], parquet(good(BAD))[:1000])
+    answer = desk.run("--json")
+    assert answer.status == 0
+    answer.says("1 left for later", f"1 shard ({KEYS[BAD]}) left for the next run: younger than source.settle")
+    assert (answer.document["newly_refused"], answer.document["standing_refused"]) == (0, 0)
+    desk.assert_holds(REST)
+    desk.write(KEYS[BAD], good(BAD))
+    os.utime(desk.campaign / KEYS[BAD], (1_600_000_000,) * 2)
+    assert desk.run().status == 0
+    desk.assert_holds(field())
+
+
+def test_nothing_but_young_shards(desk: Desk) -> None:
+    desk.write_job(source={"settle": "10 min"})
+    answer = desk.run()
+    assert answer.status == 2
+    answer.says("source.settle", "at least 10 min old", "run again later")
+    assert not desk.dossier.exists()
