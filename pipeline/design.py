@@ -165,7 +165,7 @@ def compare(stored: Design, job: Job, channels_request: str, bytes_to_read: int)
         "campaign": (stored.campaign, job.campaign),
         "source.layout": (stored.layout, job.source.layout),
         "source.time": ("times" if stored.timed else "none", "none" if job.source.time is None else "times"),
-        "source.channels and their table": (stored.channels_request, channels_request),
+        "source.channels": (stored.channels_request, channels_request),
         "design.scale": (stored.scale, job.design.scale),
         "design.gaps": (stored.gaps, job.design.gaps),
         "design.blas": (stored.blas, job.design.blas),

@@ -25,7 +25,7 @@ from shardfold.ledger import Entry, Ledger
 from shardfold.quantities import format_duration
 from shardfold.readers import reader_for
 from shardfold.readers.batch import some_names
-from shardfold.refusals import still_refused
+from shardfold.refusals import found_in, still_refused
 from shardfold.store import Store, StoreSettings, connect
 from shardfold.tasks import Workplace
 
@@ -107,7 +107,7 @@ def look(job: Job, listen: Listener, *, sample: int | None = None) -> Site:
     )
     under = digest_value(job.design_record())
     shards, standing = _sort_out(inventory, state, under)
-    if standing and not shards:
+    if standing and not shards and not any(entry.state == "in" for entry in state.shards.values()):
         raise _nothing_readable(job, standing)
     listen(Found(len(shards), len(inventory.unsettled), len(standing)))
     opened = _open(job, store, inventory, table, stored)
@@ -199,8 +199,8 @@ def _nothing_readable(job: Job, standing: dict[str, Entry]) -> InputError:
     return InputError(
         "no shard can be read",
         where=job.source.location,
-        rule="at least one shard that can be read",
-        got=f"{len(standing)} refused; the first is {key}: {entry.why.get('what', '')}",
+        rule=entry.why.get("rule", "at least one shard that can be read"),
+        got=f"{len(standing)} refused; the first is {key}: {found_in(entry)}",
         remedy=entry.why.get("remedy", "mend the shards or the source block of the job"),
     )
 

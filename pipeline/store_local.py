@@ -144,13 +144,21 @@ class LocalAdapter:
             _tell(error, self.place(key))
 
 
+_REMEDIES = {
+    errno.ENOSPC: "free some space",
+    errno.EDQUOT: "free some space",
+    errno.EEXIST: "a file is where a folder should be: correct the location",
+    errno.ENOTDIR: "a file is where a folder should be: correct the location",
+}
+
+
 def _tell(error: OSError, place: str) -> NoReturn:
     got = f"{errno.errorcode.get(error.errno or 0, type(error).__name__)}: {error.strerror}"
     if isinstance(error, PermissionError) or error.errno == errno.EROFS:
         raise AccessDenied("the file system refuses", where=place, got=got, remedy="mend the permissions") from error
     if error.errno in (errno.ESTALE, errno.ETIMEDOUT, errno.EAGAIN):
         raise Transient("the file system did not answer", where=place, got=got) from error
-    remedy = "free some space" if error.errno in (errno.ENOSPC, errno.EDQUOT) else ""
+    remedy = _REMEDIES.get(error.errno or 0, "")
     raise StorageFailed("the file system failed", where=place, got=got, remedy=remedy) from error
 
 

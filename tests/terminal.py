@@ -9,6 +9,7 @@ from __future__ import annotations
 import contextlib
 import io
 import json
+import re
 import signal
 from collections.abc import Mapping
 from dataclasses import dataclass
@@ -45,12 +46,19 @@ class Answer:
         found: dict[str, Any] = json.loads(self.out)
         return found
 
-    def says(self, *words: str) -> Answer:
+    def says(self, *words: str) -> None:
         """Assert that standard error holds every one of some texts, and is no traceback."""
         missing = [word for word in words if word not in self.err]
         assert not missing, f"{missing} not in:\n{self.err}"
         assert "Traceback" not in self.err
-        return self
+
+    def refuses(self, shard: str, *words: str) -> None:
+        """Assert that one shard is refused, once, in a message that holds every one of some texts."""
+        _, *told = re.split(r"^refused ", self.err, flags=re.MULTILINE)
+        (mine,) = (message for message in told if message.startswith(f"{shard}: "))
+        lines = [line for at, line in enumerate(mine.splitlines()) if at == 0 or line.startswith("  ")]
+        missing = [word for word in words if word not in "\n".join(lines)]
+        assert not missing, f"{missing} not in:\n{mine}"
 
 
 def shardfold(*arguments: Any) -> Answer:
@@ -68,10 +76,11 @@ def shardfold(*arguments: Any) -> Answer:
 
 
 def field(rows: int = SHARDS * ROWS) -> np.ndarray:
-    """Return the samples (rows, channels): rank 4 and an offset of some tens."""
+    """Return the first samples (rows, channels) of an endless field: rank 4 and an offset of some tens."""
     rng = np.random.Generator(np.random.PCG64(5))
     patterns = rng.standard_normal((PATTERNS, CHANNELS)) * 2.0 ** -np.arange(PATTERNS)[:, None]
-    values: np.ndarray = rng.standard_normal((rows, PATTERNS)) @ patterns + 30 * rng.standard_normal(CHANNELS)
+    offset = 30 * rng.standard_normal(CHANNELS)
+    values: np.ndarray = rng.standard_normal((rows, PATTERNS)) @ patterns + offset
     return values
 
 
@@ -95,10 +104,15 @@ def parquet(table: pa.Table, row_group: int | None = None, **options: Any) -> by
     return bytes(sink.getvalue())
 
 
+def part(number: int) -> tuple[np.ndarray, np.ndarray]:
+    """Return times and samples of one shard; the campaign has four, and more may follow."""
+    rows = slice(number * ROWS, (number + 1) * ROWS)
+    return times((number + 1) * ROWS)[rows], field((number + 1) * ROWS)[rows]
+
+
 def good(number: int) -> pa.Table:
-    """Return one of the four shards as it should be."""
-    part = slice(number * ROWS, (number + 1) * ROWS)
-    return wide(times()[part], field()[part])
+    """Return one shard as it should be."""
+    return wide(*part(number))
 
 
 class Desk:

@@ -9,14 +9,25 @@ from collections.abc import Sequence
 from typing import Protocol
 
 from shardfold.errors import InputError
-from shardfold.readers.batch import Batch, ByteSource, Fetched, Reader, group_peak_bytes
+from shardfold.readers.batch import Batch, ByteSource, Fetched, Reader
 from shardfold.readers.grids import TimeRule
 from shardfold.readers.npy import NpyReader
 from shardfold.readers.parquet import ParquetReader
+from shardfold.readers.peaks import group_peak_bytes, shard_peak_bytes
 from shardfold.readers.vector import Vector
 from shardfold.readers.wide import Wide
 
-__all__ = ["Batch", "ByteSource", "Fetched", "Reader", "SourceSettings", "group_peak_bytes", "reader_for"]
+__all__ = [
+    "Batch",
+    "ByteSource",
+    "ChannelSettings",
+    "Fetched",
+    "Reader",
+    "SourceSettings",
+    "group_peak_bytes",
+    "reader_for",
+    "shard_peak_bytes",
+]
 
 
 class ChannelSettings(Protocol):

@@ -13,11 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from shardfold.errors import ShardRefused
-from shardfold.ids import ObjectInfo, RowGroup, Shard
-
-# Measured: 2 to 16 MiB while slices are decoded (pages of 1 MiB), and 1.4 KiB per column of a footer, which makes
-# 27 MiB at 20,000 columns. A writer that makes larger pages adds the size of one page.
-SCRATCH_BYTES = 32 * 2**20
+from shardfold.ids import ObjectInfo, Shard
 
 
 @dataclass(frozen=True, eq=False)
@@ -87,17 +83,6 @@ class Reader(Protocol):
     ) -> Iterator[Batch]:
         """Yield the batches of the same row groups, fetched and decoded one after the other."""
         ...
-
-
-def group_peak_bytes(group: RowGroup) -> int:
-    """Return an upper bound, over all layouts, of the private bytes that reading row groups like this one holds.
-
-    It counts one row group being decoded while the next is fetched: ``stored_bytes`` as fetched, the larger of
-    ``stored_bytes`` (the next, while slices of this one are handed on) and ``decoded_bytes`` (its batches, all at
-    once), and `SCRATCH_BYTES` (pages and slices on their way from one to the other, and the footer). Batches that a
-    caller still holds when it asks for others come on top.
-    """
-    return group.stored_bytes + max(group.stored_bytes, group.decoded_bytes) + SCRATCH_BYTES
 
 
 def one_by_one(groups: Iterator[Fetched]) -> Iterator[Batch]:

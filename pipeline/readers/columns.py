@@ -9,6 +9,8 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 
+_FLOATS = {"halffloat": "float16", "float": "float32", "double": "float64"}
+
 
 @dataclass(frozen=True)
 class Columns:
@@ -39,6 +41,5 @@ class Columns:
 def numeric_dtype(kind: Any) -> np.dtype[Any] | None:
     """Return the NumPy type of an Arrow type that can hold measured values, or ``None``."""
     if pa.types.is_integer(kind) or pa.types.is_floating(kind):
-        dtype: np.dtype[Any] = np.dtype(kind.to_pandas_dtype())
-        return dtype
+        return np.dtype(_FLOATS.get(str(kind), str(kind)))
     return None

@@ -17,12 +17,12 @@ sys.path.insert(0, str(Path(__file__).parents[1]))
 
 import big_campaign
 from process_memory import Peaks, Sampler
-from shardfold.local_s3 import Seaweed
 
 from shardfold import budget
 from shardfold.events import StageDone, StageStarted
 from shardfold.executor_ray import RayExecutor
 from shardfold.job import Job, parse_job
+from shardfold.local_s3 import Seaweed
 from shardfold.plan import cut
 from shardfold.run import run
 from shardfold.site import look

@@ -1,6 +1,6 @@
 """A shard that cannot be trusted is refused by name, place, rule and value; all others are taken in; nothing is lost.
 
-Each case goes through the command: the run that meets the shard exits 3, the next one 0 with the case counted as
+Each case goes through the command: the run that meets a bad shard exits 3, the next one 0 with the case counted as
 standing, and once the shard is mended the result is that of the whole campaign. Singular values are NumPy's.
 """
 
@@ -16,20 +16,24 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 import pytest
-from terminal import KEYS, ROWS, SHARDS, Desk, field, good, parquet, times, wide
+from terminal import KEYS, ROWS, SHARDS, Desk, field, good, parquet, part, times, wide
 
 from shardfold.store import open_store
 from shardfold.store_local import LocalAdapter
 
 BAD = 1
-T, F = times()[BAD * ROWS : (BAD + 1) * ROWS], field()[BAD * ROWS : (BAD + 1) * ROWS]
+T, F = part(BAD)
 REST = np.delete(field(), np.s_[BAD * ROWS : (BAD + 1) * ROWS], axis=0)
-NPY_KEYS = tuple(f"run-20310323T024{number}00.npy" for number in range(SHARDS))
 
 
-def with_value(value: float) -> np.ndarray:
-    """Return the values of the bad shard with one of them replaced."""
-    values = F.copy()
+@pytest.fixture
+def desk(tmp_path: Path) -> Desk:
+    return Desk(tmp_path).write_all()
+
+
+def with_value(values: np.ndarray, value: float) -> np.ndarray:
+    """Return the values of a shard with one of them replaced."""
+    values = values.copy()
     values[17, 7] = value
     return values
 
@@ -41,112 +45,8 @@ def npy(values: np.ndarray) -> bytes:
     return sink.getvalue()
 
 
-@pytest.fixture
-def desk(tmp_path: Path) -> Desk:
-    return Desk(tmp_path).write_all()
-
-
-@pytest.fixture
-def arrays(tmp_path: Path) -> Desk:
-    """The same campaign as four arrays whose names hold their first times."""
-    made = Desk(tmp_path)
-    made.write_job(source={"layout": "array", "time": {"from_name": r"(\d{8}T\d{6})", "step": "1 s"}})
-    for number, key in enumerate(NPY_KEYS):
-        made.write(key, npy(field()[number * ROWS : (number + 1) * ROWS]))
-    return made
-
-
-def assert_refused_alone(desk: Desk, keys: tuple[str, ...], words: list[str], mended: Any) -> None:
-    """Run, run again, mend, run: the shard alone is left out, once told, and nothing of it is lost in the end."""
-    bad = keys[BAD]
-    answer = desk.run("--quiet")
-    assert answer.status == 3
-    answer.says(f"refused {bad}: ", *words)
-    assert desk.shards_in() == [key for key in keys if key != bad]
-    desk.assert_holds(REST)
-    desk.assert_intact()
-    again = desk.run("--json", "--quiet")
-    assert (again.status, again.err) == (0, "")
-    counts = {name: again.document[name] for name in ("newly_refused", "standing_refused", "cells_read", "new")}
-    assert counts == {"newly_refused": 0, "standing_refused": 1, "cells_read": 0, "new": False}
-    desk.write(bad, mended)
-    assert desk.run("--quiet").status == 0
-    assert desk.shards_in() == list(keys)
-    desk.assert_holds(field())
-    desk.assert_intact()
-
-
-PARQUET_CASES: dict[str, tuple[Callable[[], Any], list[str]]] = {
-    "no time column": (
-        lambda: wide(T, F, t=None),
-        ["there is no time column 't'", "columns G000, G001", "source.time", "remedy: "],
-    ),
-    "a channel of text": (
-        lambda: wide(T, F, G007=pa.array(["on"] * ROWS)),
-        ["not numeric", "'G007' of type string", "source.channels.exclude"],
-    ),
-    "a channel missing": (
-        lambda: wide(T, F, G007=None),
-        ["the same 40 channels", "39 channels; missing G007", "remedy: "],
-    ),
-    "a channel too many": (
-        lambda: wide(T, F, G099=pa.array(np.zeros(ROWS))),
-        ["the same 40 channels", "41 channels; not expected G099", "remedy: "],
-    ),
-    "NaN": (
-        lambda: wide(T, with_value(np.nan)),
-        ["channel G007 is nan at 2031-03-23T02:41:17Z", "design.gaps: refuse", "remedy: "],
-    ),
-    "infinity": (
-        lambda: wide(T, with_value(-np.inf)),
-        ["channel G007 is -inf at 2031-03-23T02:41:17Z", "design.gaps: refuse"],
-    ),
-    "null": (
-        lambda: wide(T, F, G007=pa.array([None if row == 17 else 0.5 for row in range(ROWS)])),
-        ["channel G007 is nan at 2031-03-23T02:41:17Z"],
-    ),
-    "a time missing": (
-        lambda: wide(T, F, t=pa.array([None, *T[1:].tolist()], pa.timestamp("ns", tz="UTC"))),
-        ["column 't', row 0", "remedy: "],
-    ),
-    "zero bytes": (lambda: b"", ["the shard is empty", "got: 0 bytes", "copy the shard again"]),
-    "cut at its end": (lambda: parquet(wide(T, F))[:-300], ["cut short, or is not Parquet", "copy the shard again"]),
-    "all but its first bytes lost": (lambda: parquet(wide(T, F))[:10], ["cut short, or is not Parquet"]),
-    "its middle lost": (
-        lambda: b"PAR1" + bytes(3000) + parquet(wide(T, F))[3004:],
-        ["row group 0", "cannot be decoded", "copy the shard again"],
-    ),
-    "no rows": (lambda: wide(T[:0], F[:0]), ["the shard holds no samples", "got: 0 rows"]),
-}
-
-
-@pytest.mark.parametrize("case", PARQUET_CASES)
-def test_a_bad_parquet_shard_is_refused_alone(desk: Desk, case: str) -> None:
-    spoiled, words = PARQUET_CASES[case]
-    desk.write(KEYS[BAD], spoiled())
-    assert_refused_alone(desk, KEYS, words, good(BAD))
-
-
-NPY_CASES: dict[str, tuple[Callable[[], bytes], list[str]]] = {
-    "zero bytes": (lambda: b"", ["the shard is empty", "0 bytes"]),
-    "cut short": (lambda: npy(F)[:-100], ["the array is cut short", f"rule: {128 + F.nbytes} bytes", f"{28 + F.nbytes}"]),
-    "cut in its header": (lambda: npy(F)[:20], [".npy header cannot be read"]),
-    "three dimensions": (lambda: npy(F[None]), ["two dimensions", "shape (1, 60, 40)"]),
-    "complex numbers": (lambda: npy(F + 1j), ["integers or floats", "complex128"]),
-    "another number of channels": (lambda: npy(F[:, :39]), ["39 channels; missing ch00039"]),
-    "NaN": (lambda: npy(with_value(np.nan)), ["channel ch00007 is nan at 2031-03-23T02:41:17Z"]),
-}
-
-
-@pytest.mark.parametrize("case", NPY_CASES)
-def test_a_bad_array_is_refused_alone(arrays: Desk, case: str) -> None:
-    spoiled, words = NPY_CASES[case]
-    arrays.write(NPY_KEYS[BAD], spoiled())
-    assert_refused_alone(arrays, NPY_KEYS, words, npy(F))
-
-
 class Trap:
-    """Makes a file when it is unpickled."""
+    """Makes a folder when it is unpickled."""
 
     def __init__(self, path: Path) -> None:
         self.path = path
@@ -155,21 +55,106 @@ class Trap:
         return os.mkdir, (str(self.path),)
 
 
-@pytest.mark.parametrize("form", ["an array of objects", "a bare pickle"])
-def test_pickled_objects_are_never_loaded(arrays: Desk, form: str) -> None:
-    trap = arrays.folder / "sprung"
-    values = np.empty(F.shape, object)
-    values[:] = Trap(trap)
-    payload = npy(values) if form == "an array of objects" else pickle.dumps(Trap(trap))
-    words = ["pickled Python objects are never loaded"] if form == "an array of objects" else ["cannot be read"]
-    arrays.write(NPY_KEYS[BAD], payload)
-    assert_refused_alone(arrays, NPY_KEYS, words, npy(F))
-    assert not trap.exists()
+def assert_refused_alone(desk: Desk, cases: dict[str, tuple[Any, Any, list[str]]]) -> None:
+    """Run, run again, mend, run: the bad shards alone are left out, told once, and lost to nobody in the end."""
+    sound = sorted(path.name for path in desk.campaign.iterdir())
+    for key, (spoiled, _, _) in cases.items():
+        desk.write(key, spoiled)
+    answer = desk.run("--quiet")
+    assert answer.status == 3
+    for key, (_, _, words) in cases.items():
+        answer.refuses(key, *words, "rule: ", "got: ")
+    assert desk.shards_in() == sound
+    desk.assert_holds(field())
+    desk.assert_intact()
+    again = desk.run("--json", "--quiet")
+    assert (again.status, again.err) == (0, "")
+    counts = {name: again.document[name] for name in ("newly_refused", "standing_refused", "cells_read", "new")}
+    assert counts == {"newly_refused": 0, "standing_refused": len(cases), "cells_read": 0, "new": False}
+    for key, (_, mended, _) in cases.items():
+        desk.write(key, mended)
+    assert desk.run("--quiet").status == 0
+    assert desk.shards_in() == sorted([*sound, *cases])
+    desk.assert_holds(field((SHARDS + len(cases)) * ROWS))
+    desk.assert_intact()
 
 
-def test_the_payload_of_the_test_above_would_have_gone_off(tmp_path: Path) -> None:
-    pickle.loads(pickle.dumps(Trap(tmp_path / "sprung")))  # noqa: S301
-    assert (tmp_path / "sprung").exists()
+def empty_time(moments: np.ndarray) -> pa.Array:
+    """Return times of which the first is missing."""
+    return pa.array([None, *moments[1:].tolist()], pa.timestamp("ns", tz="UTC"))
+
+
+PARQUET_CASES: dict[str, tuple[Callable[[np.ndarray, np.ndarray], Any], list[str]]] = {
+    "no-times": (lambda t, f: wide(t, f, t=None), ["no time column 't'", "columns G000, G001", "source.time"]),
+    "text": (
+        lambda t, f: wide(t, f, G007=pa.array(["on"] * ROWS)),
+        ["not numeric", "'G007' of type string", "source.channels.exclude"],
+    ),
+    "missing": (lambda t, f: wide(t, f, G007=None), ["the same 40 channels", "39 channels; missing G007", "remedy: "]),
+    "unexpected": (
+        lambda t, f: wide(t, f, G099=pa.array(np.zeros(ROWS))),
+        ["the same 40 channels", "41 channels; not expected G099", "remedy: "],
+    ),
+    "nan": (
+        lambda t, f: wide(t, with_value(f, np.nan)),
+        ["channel G007 is nan at 2031-03-23T02:48:17Z", "design.gaps: refuse", "remedy: "],
+    ),
+    "infinity": (
+        lambda t, f: wide(t, with_value(f, -np.inf)),
+        ["channel G007 is -inf at 2031-03-23T02:49:17Z", "design.gaps: refuse"],
+    ),
+    "null": (
+        lambda t, f: wide(t, f, G007=pa.array([None if row == 17 else 0.5 for row in range(ROWS)])),
+        ["channel G007 is nan at 2031-03-23T02:50:17Z"],
+    ),
+    "no-time": (lambda t, f: wide(t, f, t=empty_time(t)), ["column 't', row 0", "remedy: "]),
+    "zero-bytes": (lambda t, f: b"", ["the shard is empty", "got: 0 bytes", "copy the shard again"]),
+    "cut": (lambda t, f: parquet(wide(t, f))[:-300], ["cut short, or is not Parquet", "copy the shard again"]),
+    "stump": (lambda t, f: parquet(wide(t, f))[:10], ["cut short, or is not Parquet"]),
+    "hollow": (
+        lambda t, f: b"PAR1" + bytes(3000) + parquet(wide(t, f))[3004:],
+        ["row group 0", "cannot be decoded", "copy the shard again"],
+    ),
+    "no-rows": (lambda t, f: wide(t[:0], f[:0]), ["the shard holds no samples", "got: 0 rows"]),
+}
+
+
+def test_bad_parquet_shards_are_refused_alone(desk: Desk) -> None:
+    cases = {
+        f"z-{name}.parquet": (spoil(*part(number)), good(number), words)
+        for number, (name, (spoil, words)) in enumerate(PARQUET_CASES.items(), SHARDS)
+    }
+    assert_refused_alone(desk, cases)
+
+
+NPY_CASES: list[tuple[Callable[[np.ndarray, Trap], bytes], list[str]]] = [
+    (lambda f, trap: b"", ["the shard is empty", "0 bytes"]),
+    (lambda f, trap: npy(f)[:-100], ["the array is cut short", f"{128 + F.nbytes} bytes", f"{28 + F.nbytes} bytes"]),
+    (lambda f, trap: npy(f)[:20], [".npy header cannot be read"]),
+    (lambda f, trap: npy(f[None]), ["two dimensions", "shape (1, 60, 40)"]),
+    (lambda f, trap: npy(f + 1j), ["integers or floats", "complex128"]),
+    (lambda f, trap: npy(f[:, :39]), ["the same 40 channels", "39 channels; missing ch00039"]),
+    (lambda f, trap: npy(with_value(f, np.nan)), ["channel ch00007 is nan at 2031-03-23T02:50:17Z"]),
+    (lambda f, trap: npy(np.full(f.shape, trap)), ["pickled Python objects are never loaded", "remedy: "]),
+    (lambda f, trap: pickle.dumps(trap), ["header cannot be read"]),
+]
+
+
+def test_bad_arrays_are_refused_alone_and_nothing_is_unpickled(tmp_path: Path) -> None:
+    desk = Desk(tmp_path)
+    desk.write_job(source={"layout": "array", "time": {"from_name": r"(\d{8}T\d{6})", "step": "1 s"}})
+    keys = [f"run-20310323T02{40 + number}00.npy" for number in range(SHARDS + len(NPY_CASES))]
+    for number in range(SHARDS):
+        desk.write(keys[number], npy(part(number)[1]))
+    trap = Trap(tmp_path / "sprung")
+    cases = {
+        keys[number]: (spoil(part(number)[1], trap), npy(part(number)[1]), words)
+        for number, (spoil, words) in enumerate(NPY_CASES, SHARDS)
+    }
+    assert_refused_alone(desk, cases)
+    assert not trap.path.exists()
+    pickle.loads(pickle.dumps(trap))  # noqa: S301
+    assert trap.path.exists(), "the payload must be one that would have gone off"
 
 
 def test_a_campaign_of_bad_shards_only_ends_without_a_dossier(desk: Desk) -> None:
@@ -185,7 +170,7 @@ def test_a_campaign_of_bad_shards_only_ends_without_a_dossier(desk: Desk) -> Non
 
 def test_values_that_are_bad_everywhere_end_the_run(desk: Desk) -> None:
     for number, key in enumerate(KEYS):
-        desk.write(key, wide(times()[number * ROWS :][:ROWS], with_value(np.nan)))
+        desk.write(key, wide(times()[number * ROWS :][:ROWS], with_value(F, np.nan)))
     answer = desk.run()
     assert answer.status == 2
     answer.says("no shard can be taken in", "4 refused", "channel G007 is nan at 2031-03-23T02:40:17Z")
@@ -315,7 +300,7 @@ def test_a_shard_still_being_written_is_left_for_the_next_run(desk: Desk) -> Non
     """It is half there and young; not looked into, not refused."""
     desk.write_job(source={"settle": "10 min"})
     for key in KEYS:
-        os.utime(desk.campaign / key, (1_900_000_000 - 86_400,) * 2)
+        os.utime(desk.campaign / key, (1_600_000_000,) * 2)
     desk.write(KEYS[BAD], parquet(good(BAD))[:1000])
     answer = desk.run("--json")
     assert answer.status == 0

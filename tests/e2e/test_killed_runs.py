@@ -43,12 +43,12 @@ def write_campaign(store: Store) -> None:
 
 
 def write_job(path: Path, bucket: Any, endpoint: str, dossier: str, workers: str) -> Path:
+    storage = f'storage: {{endpoint: "{endpoint}"}}'
     path.write_text(
         f"""
 campaign: killed
-source:
-  {{location: {bucket.location}/campaign, layout: vector, time: t, values: v, settle: 0 s, storage: {{endpoint: "{endpoint}"}}}}
-dossier: {{location: {bucket.location}/{dossier}, storage: {{endpoint: "{endpoint}"}}}}
+source: {{location: {bucket.location}/campaign, layout: vector, time: t, values: v, settle: 0 s, {storage}}}
+dossier: {{location: {bucket.location}/{dossier}, {storage}}}
 design: {{width: 20, leaf: 15 min}}
 modes: {{rank: 4, reads: 2}}
 engine: {{workers: {workers}}}
@@ -140,9 +140,7 @@ def kill_and_finish(
     dossier = open_store(f"{bucket.location}/{name}", bucket.endpoint)
     stored = whole_objects(dossier)
     assert len(results(dossier)) <= (0 if trap.killed else 1)
-    shards_done = {
-        unpack(dossier.read(key), "cell", key)[0]["pieces"][0]["shard"] for key in stored
-    }
+    shards_done = {unpack(dossier.read(key), "cell", key)[0]["pieces"][0]["shard"] for key in stored}
     proxy.forget()
     finish(job)
     for shard in shards_done:

@@ -25,7 +25,7 @@ class Shore:
         self._place, self._endpoint = folder.location, folder.endpoint
         self.campaign = open_store(f"{self._place}/campaign", self._endpoint)
 
-    def run(self, layout: str, rank: int, modes: dict[str, Any] | None = None, **blocks: dict[str, Any]) -> Found:
+    def run(self, layout: str, rank: int, modes: dict[str, Any] | None = None, **blocks: Any) -> Found:
         blocks |= {"modes": {"rank": rank} | (modes or {})}
         places = (f"{self._place}/campaign", f"{self._place}/dossier")
         return run_job(job_text(*places, layout, self._endpoint, **blocks))
@@ -39,12 +39,12 @@ def shore(folder: Any) -> Shore:
 def sines(found: np.ndarray, exact: np.ndarray) -> np.ndarray:
     """Return the sine of the angle between each found unit vector and the exact direction, column by column."""
     exact = exact / np.linalg.norm(exact, axis=0)
-    return np.linalg.norm(found - exact * (exact * found).sum(axis=0), axis=0)
+    return np.asarray(np.linalg.norm(found - exact * (exact * found).sum(axis=0), axis=0))
 
 
 def assurance(found: np.ndarray, exact: np.ndarray) -> np.ndarray:
     """Return the modal assurance criterion of each pair of columns (Allemang and Brown, IMAC 1982)."""
-    return (found * exact).sum(axis=0) ** 2 / (found**2).sum(axis=0) / (exact**2).sum(axis=0)
+    return np.asarray((found * exact).sum(axis=0) ** 2 / (found**2).sum(axis=0) / (exact**2).sum(axis=0))
 
 
 def plane_sine(found: np.ndarray, exact: np.ndarray) -> float:
@@ -174,7 +174,7 @@ CANTILEVER_SIGMAS = np.array([0.734095514, 1.018467319, 0.999224497])
 def cantilever(x: np.ndarray) -> np.ndarray:
     """Return the first three shapes at the points x of (0, 1)."""
     b = np.outer(x, CANTILEVER_ROOTS)
-    return np.cosh(b) - np.cos(b) - CANTILEVER_SIGMAS * (np.sinh(b) - np.sin(b))
+    return np.asarray(np.cosh(b) - np.cos(b) - CANTILEVER_SIGMAS * (np.sinh(b) - np.sin(b)))
 
 
 @pytest.mark.parametrize(

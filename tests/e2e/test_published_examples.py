@@ -1,7 +1,7 @@
-"""Published worked examples of principal components come out digit by digit through the whole pipeline on object storage.
+"""Published worked examples of principal components come out digit by digit through the pipeline on object storage.
 
-No data set has times, so samples are known by shard and row. Sources stand beside the figures; [M] marks one quoted from
-memory and confirmed by computing.
+No data set has times, so samples are known by shard and row. Sources stand beside the figures; [M] marks one quoted
+from memory and confirmed by computing.
 """
 
 from __future__ import annotations
@@ -43,9 +43,7 @@ def test_us_arrests_with_a_scale_per_channel(folder: Any, campaign: Store) -> No
     for number, start in enumerate(range(0, 50, 17)):
         part = table.slice(start, 17)
         put_table(campaign, f"states-{number}.parquet", dict(zip(part.column_names, part.columns, strict=True)))
-    found = run(
-        folder, "wide", 4, design={"scale": "table"}, channels={"table": f"{folder.location}/channels.parquet"}
-    )
+    found = run(folder, "wide", 4, design={"scale": "table"}, channels={"table": f"{folder.location}/channels.parquet"})
     assert found.result.modes.column("channel").to_pylist() == ["murder", "assault", "urban", "rape"]
     shares = [0.62006039, 0.24744129, 0.08914080, 0.04335752]
     np.testing.assert_allclose(found.column("energy_fraction"), shares, atol=1e-8)
@@ -59,7 +57,7 @@ def test_us_arrests_with_a_scale_per_channel(folder: Any, campaign: Store) -> No
 
 
 def test_iris(folder: Any, campaign: Store) -> None:
-    # R, prcomp(iris[1:4]), and the documentation of scikit-learn [M]. The data as scikit-learn has carried it since 0.20.
+    # R, prcomp(iris[1:4]), and the documentation of scikit-learn [M]. The data are those of scikit-learn since 0.20.
     matrix = load_iris().data.T
     write_vector(campaign, matrix, shards=5, row_group=11)
     found = run(folder, "vector", 4)
@@ -85,8 +83,7 @@ def test_digits_with_channels_that_never_vary(folder: Any, campaign: Store, orie
     assert [note == "constant" for note in summary.column("note").to_pylist()] == constant.tolist()
     share = summary.column("captured_fraction")
     assert [value is None for value in share.to_pylist()] == constant.tolist()
-    centred = matrix - matrix.mean(axis=1, keepdims=True)
-    captured = 1 - ((centred - found.modes @ found.coefficients)**2).sum(axis=1)[~constant] / (
-        (centred**2).sum(axis=1)[~constant]
-    )
+    varying = matrix[~constant] - matrix[~constant].mean(axis=1, keepdims=True)
+    missed = varying - (found.modes @ found.coefficients)[~constant]
+    captured = 1 - (missed**2).sum(axis=1) / (varying**2).sum(axis=1)
     np.testing.assert_allclose(share.to_numpy()[~constant], captured, atol=1e-12)

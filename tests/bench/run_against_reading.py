@@ -1,0 +1,149 @@
+"""A whole run against reading and decoding the same shards and throwing them away, with the same Ray workers.
+
+Run ``python tests/bench/run_against_reading.py``. It starts an S3 server and a local Ray, writes one vector campaign
+per compression, and in turn reads it through the package's readers (one task per shard, so many at once as there are
+workers) and runs it into a new dossier: inventory, sums, modes, coefficients, result and all. The engine's start is in
+neither. It prints every pair and the ratios, by the clock and by processor time (driver, workers and S3 server).
+"""
+
+from __future__ import annotations
+
+import argparse
+import os
+import time
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass
+from statistics import median
+from typing import Any
+
+import big_campaign
+import psutil
+import ray
+
+from shardfold.events import StageDone, StageStarted
+from shardfold.executor_ray import RayExecutor
+from shardfold.ids import Shard
+from shardfold.job import Job, parse_job
+from shardfold.local_s3 import Seaweed
+from shardfold.readers import reader_for
+from shardfold.run import run
+from shardfold.site import look, settings
+from shardfold.store import connect
+
+
+@dataclass(frozen=True)
+class Cost:
+    """What something took."""
+
+    wall: float
+    processor: float
+
+
+def main() -> None:
+    """Print one table per compression."""
+    parser = argparse.ArgumentParser(description=__doc__)
+    big_campaign.options(parser, gigabytes=2.0)
+    parser.add_argument("--compressions", nargs="+", default=["none", "zstd"])
+    parser.add_argument("--workers", type=int, default=2)
+    parser.add_argument("--repeats", type=int, default=3)
+    given = parser.parse_args()
+    with Seaweed() as server:
+        os.environ.update(server.environment)
+        engine = RayExecutor(given.workers, None)
+        try:
+            for compression in given.compressions:
+                campaign = big_campaign.chosen(given, compression)
+                server.make_bucket(compression.lower() + "-bench")
+                _compare(campaign, server.endpoint, given.workers, given.repeats)
+        finally:
+            engine.close()
+
+
+def _compare(campaign: big_campaign.Campaign, endpoint: str, workers: int, repeats: int) -> None:
+    bucket = f"s3://{campaign.compression.lower()}-bench"
+    stored = big_campaign.write_apart(f"{bucket}/campaign", endpoint, campaign)
+    print(f"{campaign}, {stored / 1e9:.2f} GB stored, {workers} workers")
+    pairs = []
+    stages: dict[str, float] = {}
+    for repeat in range(repeats + 1):
+        job = _job(campaign, bucket, endpoint, workers, repeat)
+        reading = _cost(_read, job, workers)
+        whole = _cost(_run, job, workers, stages)
+        if repeat == 0:
+            continue  # imports and first connections
+        pairs.append((reading, whole))
+        _line("wall", reading.wall, whole.wall, "   processor", reading.processor, whole.processor)
+    walls, processor = [w.wall / r.wall for r, w in pairs], [w.processor / r.processor for r, w in pairs]
+    rate = campaign.values_bytes / median(whole.wall for _, whole in pairs) / 1e6
+    print(
+        f"  median ratio {median(walls):.2f}, by processor time {median(processor):.2f}; the run does {rate:.0f} MB/s"
+    )
+    print("  the last run: " + ", ".join(f"{stage} {seconds:.1f} s" for stage, seconds in stages.items()))
+
+
+def _line(*parts: Any) -> None:
+    """Print what reading and the run took, by each clock, and the ratio."""
+    columns = zip(parts[::3], parts[1::3], parts[2::3], strict=True)
+    print("  " + "".join(f"{name}: reading {r:6.1f} s, run {w:6.1f} s, ratio {w / r:.2f}" for name, r, w in columns))
+
+
+def _job(campaign: big_campaign.Campaign, bucket: str, endpoint: str, workers: int, repeat: int) -> Job:
+    text = f"""
+campaign: speed
+source: {campaign.source(f"{bucket}/campaign", endpoint)}
+dossier: {{location: {bucket}/dossier-{repeat}, storage: {{endpoint: '{endpoint}', region: us-east-1}}}}
+engine: {{workers: {workers}}}
+"""
+    return parse_job(text, "bench.yaml")
+
+
+def _cost(work: Callable[..., None], *arguments: Any) -> Cost:
+    before, begin = _processor_seconds(), time.perf_counter()
+    work(*arguments)
+    return Cost(time.perf_counter() - begin, _processor_seconds() - before)
+
+
+def _processor_seconds() -> float:
+    """Return what this process and all that it started have used; the workers live on from repeat to repeat."""
+    me = psutil.Process()
+    times = [process.cpu_times() for process in (me, *me.children(recursive=True))]
+    return sum(t.user + t.system for t in times)
+
+
+def _read(job: Job, workers: int) -> None:
+    """Read every shard, a task each; what is decoded is counted and dropped."""
+    site = look(job, lambda event: None)
+    read = ray.remote(num_cpus=1)(_read_shard)
+    waiting: Iterator[Shard] = iter(site.shards.values())
+    flying, rows = [], 0
+    while True:
+        while len(flying) < workers and (shard := next(waiting, None)) is not None:
+            flying.append(read.remote(job, shard))
+        if not flying:
+            break
+        (done,), flying = ray.wait(flying, num_returns=1)
+        rows += ray.get(done)
+    assert rows == sum(shard.rows for shard in site.shards.values())
+
+
+def _read_shard(job: Job, shard: Shard) -> int:
+    reader, store = reader_for(job.source), connect(settings(job, "source"))
+    batches = reader.batches(store, shard, 0, len(shard.groups), shard.channels)
+    return sum(batch.values.shape[1] for batch in batches)
+
+
+def _run(job: Job, workers: int, stages: dict[str, float]) -> None:
+    begun: dict[str, float] = {}
+
+    def listen(event: object) -> None:
+        if isinstance(event, StageStarted):
+            begun[event.stage] = time.perf_counter()
+        elif isinstance(event, StageDone):
+            stages[event.stage] = time.perf_counter() - begun[event.stage]
+
+    # The executor finds the Ray that main started, and leaves it running.
+    run(job, lambda: RayExecutor(workers, None), listen)
+
+
+if __name__ == "__main__":
+    main()
