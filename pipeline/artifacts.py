@@ -1,13 +1,15 @@
 """Records: named arrays and a header as one self-checking object, and back.
 
 A record is ``magic, header length, header digest, header JSON, arrays``. The header gives kind, facts and, for each
-array, type, shape, place and digest, so one array can be read alone by range and still be checked. Arrays start at
-multiples of 64 bytes. Nothing is ever unpickled. What the arrays mean is not known here.
+array, type, shape, place and digest, so some arrays can be read by range and still be checked. Arrays start at
+multiples of 64 bytes, and not before byte 4096: one request of fixed length brings most headers. Nothing is ever
+unpickled. What the arrays mean is not known here.
 """
 
 from __future__ import annotations
 
 import json
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any, Protocol
 
@@ -20,7 +22,7 @@ from shardfold.ids import canonical_json, digest_bytes
 
 MAGIC = b"shardfold record 1\n"
 ALIGNMENT = 64
-FIRST_READ_BYTES = 64 * 1024
+FIRST_READ_BYTES = 4096
 
 Array = npt.NDArray[Any]
 Buffer = bytes | bytearray | memoryview
@@ -75,6 +77,7 @@ def pack(kind: str, facts: dict[str, Any], arrays: dict[str, Array]) -> bytearra
             "digest": digest_array(array),
         }
     header = canonical_json({"kind": kind, "facts": facts, "arrays": entries})
+    header += b" " * (FIRST_READ_BYTES - _prefix_bytes(len(header)))
     header += b" " * (-_prefix_bytes(len(header)) % ALIGNMENT)
     begin = _prefix_bytes(len(header))
     record = bytearray(begin + end)
@@ -117,26 +120,33 @@ def read_header(store: Readable, key: str, kind: str) -> Header:
     RecordCorrupt
         If the header is not as written.
     """
-    prefix = _prefix_bytes(0)
-    lead = store.read(key, start=0, stop=prefix)
-    length = _header_bytes(lead, key)
-    return _parse(bytes(lead) + bytes(store.read(key, start=prefix, stop=prefix + length)), kind, key)
+    data = bytes(store.read(key, start=0, stop=FIRST_READ_BYTES))
+    stop = _prefix_bytes(_header_bytes(data, key))
+    if stop > len(data):
+        data += bytes(store.read(key, start=len(data), stop=stop))
+    return _parse(data, kind, key)
 
 
-def read_array(store: Readable, key: str, header: Header, name: str) -> Array:
-    """Return one array of a stored record by a ranged read, its digest checked.
+def read_arrays(store: Readable, key: str, header: Header, names: Sequence[str]) -> dict[str, Array]:
+    """Return some arrays of a stored record by one ranged read from the first of them to the last, digests checked.
 
     Raises
     ------
     RecordCorrupt
-        If the array is missing or its digest differs.
+        If an array is missing or its digest differs.
     """
-    entry = header.arrays.get(name)
-    if entry is None:
-        raise _corrupt(key, f"an array {name!r}", f"{sorted(header.arrays)}")
-    start = header.payload_start + entry["start"]
-    data = store.read(key, start=start, stop=start + entry["bytes"]) if entry["bytes"] else b""
-    return _array(data, entry, f"{key}, array {name}")
+    missing = [name for name in names if name not in header.arrays]
+    if missing:
+        raise _corrupt(key, f"an array {missing[0]!r}", f"{sorted(header.arrays)}")
+    entries = {name: header.arrays[name] for name in names}
+    first = min((entry["start"] for entry in entries.values()), default=0)
+    stop = max((entry["start"] + entry["bytes"] for entry in entries.values()), default=0)
+    begin = header.payload_start
+    data = memoryview(store.read(key, start=begin + first, stop=begin + stop) if stop > first else b"")
+    return {
+        name: _array(data[entry["start"] - first :][: entry["bytes"]], entry, f"{key}, array {name}")
+        for name, entry in entries.items()
+    }
 
 
 def digest_array(array: Array) -> str:

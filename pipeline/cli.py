@@ -36,7 +36,6 @@ from shardfold.site import local_places
 F = TypeVar("F", bound=Callable[..., Any])
 
 REFUSED_STATUS = 3
-BROKEN_PIPE_STATUS = 128 + signal.SIGPIPE
 
 
 def _common(function: F) -> F:
@@ -180,10 +179,6 @@ def _status(arguments: list[str] | None) -> int:
         return _fail(_stopped(signal.SIGINT), as_json)
     except ShardfoldError as error:
         return _fail(error, as_json)
-    except BrokenPipeError:
-        # Whoever read the answer has gone, as `head` does; the flush at the end of Python must not fail again.
-        sys.stdout = open(os.devnull, "w")  # noqa: SIM115
-        return BROKEN_PIPE_STATUS
     except Exception as error:
         traceback.print_exc()
         return _fail(ShardfoldError(f"a bug: {type(error).__name__}; the lines above say where"), as_json)
@@ -236,6 +231,12 @@ def _print_result(result: Result, quiet: bool) -> None:
     for row in rows:
         table.add_row(*row)
     console = Console(highlight=False, soft_wrap=True, width=None if sys.stdout.isatty() else 120)
+    with console.capture() as text:
+        _write_result(console, table, result, quiet)
+    click.echo(text.get(), nl=False)
+
+
+def _write_result(console: Console, table: Table, result: Result, quiet: bool) -> None:
     q = result.manifest["quality"]
     console.print(
         f"{result.manifest['campaign']}: {q['channels']:,} channels, {q['samples']:,} samples, "

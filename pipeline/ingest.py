@@ -322,7 +322,7 @@ def _rivals(intake: Intake, read: int, cells: Sequence[Cell]) -> dict[int, Shard
         for cell in group:
             key = layout.cell_key(read, leaf, cell.name)
             header = artifacts.read_header(intake.store, key, "cell")
-            times.append(artifacts.read_array(intake.store, key, header, "times"))
+            times.append(artifacts.read_arrays(intake.store, key, header, ("times",))["times"])
             owners += [(r["shard"], r["version"], r["rows"]) for r in _records(intake, cell)]
         try:
             check_repeats(np.concatenate(times), owners)

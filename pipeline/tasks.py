@@ -223,8 +223,8 @@ def load_summary(store: Store, key: str, kind: str, shape: Shape) -> Summary:
     """Return the summary of a stored cell or sum, without its X; the arrays are owned and writable."""
     header = artifacts.read_header(store, key, kind)
     names = [name for name in header.arrays if name in _SUMMARY_ARRAYS]
-    arrays = {name: artifacts.read_array(store, key, header, name).copy(order="K") for name in names}
-    return from_arrays(shape, arrays)
+    arrays = artifacts.read_arrays(store, key, header, names)
+    return from_arrays(shape, {name: array.copy(order="K") for name, array in arrays.items()})
 
 
 _SUMMARY_ARRAYS = ("n", "mean", "energy", "outer", "inner", "right_mean", "low", "high", "gaps")
@@ -259,9 +259,8 @@ def write_coefficients(workplace: Workplace, task: WriteCoefficients) -> PartWri
 def _coefficients_of_x(workplace: Workplace, desk: _Desk, cell: Cell, task: WriteCoefficients) -> tuple[Array, ...]:
     key = layout.cell_key(cell.read, cell.leaf, cell.name)
     header = artifacts.read_header(desk.dossier, key, "cell")
-    times, x, counts, centres = (
-        artifacts.read_array(desk.dossier, key, header, name) for name in ("times", "x", "x_counts", "x_centres")
-    )
+    names = ("times", "x", "x_counts", "x_centres")
+    times, x, counts, centres = artifacts.read_arrays(desk.dossier, key, header, names).values()
     values = np.empty((len(task.mapping.rows), len(times)))
     start = 0
     for count, centre in zip(counts, centres, strict=True):
@@ -270,8 +269,8 @@ def _coefficients_of_x(workplace: Workplace, desk: _Desk, cell: Cell, task: Writ
         values[:, block] = task.mapping.rows @ x[block].T.astype(np.float64) + offset[:, None]
         start += int(count)
     pieces = header.facts["pieces"]
-    names = np.array([piece["shard"] if not workplace.design.timed else "" for piece in pieces])
-    return times, np.repeat(names, [piece["rows"] for piece in pieces]), values
+    owners = np.array([piece["shard"] if not workplace.design.timed else "" for piece in pieces])
+    return times, np.repeat(owners, [piece["rows"] for piece in pieces]), values
 
 
 def _coefficients_by_reading(

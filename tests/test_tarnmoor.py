@@ -157,9 +157,9 @@ def test_thermal_bow_is_a_small_part_of_the_first_mode():
 
 
 def test_half_an_hour_is_enough_for_the_shapes(whole: tuple[Shelf, tarnmoor.Truth]):
-    """Full singular value decomposition of the first two shards, as a reader with NumPy would do it."""
+    """Singular value decomposition of every fourth sample of two shards, as a reader with NumPy would do it."""
     shelf, truth = whole
-    deck = np.concatenate([deck_of(shelf[key]) for key in truth.keys[:2]])
+    deck = np.concatenate([deck_of(shelf[key])[::4] for key in truth.keys[:2]])
     _, _, modes = np.linalg.svd(deck - deck.mean(axis=0), full_matrices=False)
     rows = tarnmoor.how_close(modes[:3].T, np.full(3, np.nan))
     assert [row.shape for row in rows] == [1, 2, 3]

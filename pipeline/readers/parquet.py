@@ -86,7 +86,9 @@ class ParquetReader:
         with refusing(info, "the footer cannot be understood"):
             time_field = _time_field(footer, self.time)
             columns = self.layout.find(footer, time_field)
-        return _Opened(footer, columns, time_field, grid_of(self.time, info, sum(footer.rows)))
+            zoned = time_field is not None and bool(getattr(footer.schema.field(time_field).type, "tz", None))
+        grid = grid_of(self.time, info, sum(footer.rows))
+        return _Opened(footer, columns, time_field, grid, grid.zoned if grid else zoned)
 
     def _decode(
         self, opened: _Opened, group: int, described: RowGroup, channels: Sequence[str], reader: Any
@@ -114,17 +116,11 @@ class _Opened:
     columns: Columns
     time_field: int | None
     grid: Grid | None
+    zoned: bool
 
     def needed(self, leaves: Sequence[int]) -> list[int]:
         """Return the leaf columns to fetch for some channels, the time's included."""
         return [*leaves, *([] if self.time_field is None else self.footer.leaves[self.time_field])]
-
-    @property
-    def zoned(self) -> bool:
-        """Return whether the times carry a zone."""
-        if self.time_field is None:
-            return self.grid is not None and self.grid.zoned
-        return bool(getattr(self.footer.schema.field(self.time_field).type, "tz", None))
 
 
 def _describe_group(store: ByteSource, shard: _Opened, group: int) -> RowGroup:
