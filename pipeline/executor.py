@@ -7,7 +7,7 @@ first error that is not a refused shard ends the stage, and nothing half-done is
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from typing import Protocol
 
 from shardfold.tasks import Outcome, Task, Workplace, perform
@@ -43,3 +43,29 @@ class SerialExecutor:
 
     def close(self) -> None:
         """Do nothing; no resources are held."""
+
+
+class Deferred:
+    """An executor that is started by its first task."""
+
+    def __init__(self, make: Callable[[], Executor]) -> None:
+        self._make = make
+        self._made: Executor | None = None
+
+    def perform(self, workplace: Workplace, tasks: Sequence[Task]) -> Iterator[tuple[Task, Outcome]]:
+        """Start the executor if there is a task, and let it perform them."""
+        return self._executor().perform(workplace, tasks) if tasks else iter(())
+
+    def nodes(self) -> int:
+        """Return on how many machines the workers are."""
+        return self._executor().nodes()
+
+    def close(self) -> None:
+        """End the executor if it was started."""
+        if self._made is not None:
+            self._made.close()
+
+    def _executor(self) -> Executor:
+        if self._made is None:
+            self._made = self._make()
+        return self._made

@@ -1,41 +1,33 @@
 """The page to read first: a run in seven calls.
 
-Look at the campaign and its dossier; plan and refuse what is too large; bring the cells of each read into storage;
-add them up; finish; write the coefficients; publish. Every call leaves storage in a state from which the same command
-goes on, so a run may be killed anywhere.
+Look at the campaign and its dossier; refuse what cannot be or is too large; create the dossier; plan a read; bring its
+cells into storage; freeze the probe of the next; conclude with a result. Every call leaves storage in a state from
+which the same command goes on, so a run may be killed anywhere.
 """
 
 from __future__ import annotations
 
-import socket
 import time
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from datetime import UTC, datetime
 from importlib.metadata import version
 from typing import Any
 
 from shardfold import budget, dossier, layout
-from shardfold.blas import core_type
+from shardfold.conclude import Conclusion, conclude, sum_of
 from shardfold.design import Design
 from shardfold.errors import InputError, RecordCorrupt
-from shardfold.events import Listener, Noted, Published
-from shardfold.executor import Executor
-from shardfold.finish import finding_of, too_few_samples, write_parts, write_probe
-from shardfold.gather import moment
-from shardfold.ids import digest_value
-from shardfold.ingest import Intake, blocked_by_vanished, bring_in
+from shardfold.events import Listener, Noted
+from shardfold.executor import Deferred, Executor
+from shardfold.finish import too_few_samples, write_probe
+from shardfold.ingest import Intake, bring_in
 from shardfold.job import Job
 from shardfold.kernels.factors import probe_width
-from shardfold.kernels.whole import Shape, Summary
+from shardfold.kernels.whole import Shape
 from shardfold.plan import Cell
-from shardfold.publish import manifest, put_all, quality, result_tables, seal, shards_digest
-from shardfold.refusals import nothing_left
+from shardfold.refusals import found_in, nothing_left
 from shardfold.site import Site, look
-from shardfold.sums import add_all
-from shardfold.tasks import Outcome, Task, Workplace
-
-PACKAGES = ("numpy", "scipy", "pyarrow", "ray", "s3fs")
 
 
 @dataclass(frozen=True)
@@ -50,6 +42,8 @@ class Report:
         Whether this run published it.
     newly_refused, standing_refused : int
         Shards refused by this run, and by earlier ones for the same reason.
+    refused : dict of key to str
+        What is wrong with each of them.
     """
 
     location: str
@@ -60,6 +54,7 @@ class Report:
     bytes_read: int
     newly_refused: int
     standing_refused: int
+    refused: dict[str, str] = field(default_factory=dict)
     quality: dict[str, Any] = field(default_factory=dict)
 
 
@@ -99,35 +94,9 @@ def run(job: Job, make_executor: Callable[[], Executor], listen: Listener) -> Re
             probes.append(digest)
             if read < reads:
                 _freeze_probe(site, intake, read, shape, cells)
-        return _publish(site, intake, shape, cells, probes, started)
+        return _report(site, intake, conclude(site, intake, shape, cells, probes, started))
     finally:
         executor.close()
-
-
-class Deferred:
-    """An executor that is started by its first task."""
-
-    def __init__(self, make: Callable[[], Executor]) -> None:
-        self._make = make
-        self._made: Executor | None = None
-
-    def perform(self, workplace: Workplace, tasks: Sequence[Task]) -> Iterator[tuple[Task, Outcome]]:
-        """Start the executor if there is a task, and let it perform them."""
-        return self._executor().perform(workplace, tasks) if tasks else iter(())
-
-    def nodes(self) -> int:
-        """Return on how many machines the workers are."""
-        return self._executor().nodes()
-
-    def close(self) -> None:
-        """End the executor if it was started."""
-        if self._made is not None:
-            self._made.close()
-
-    def _executor(self) -> Executor:
-        if self._made is None:
-            self._made = self._make()
-        return self._made
 
 
 def _intake(site: Site, executor: Executor, listen: Listener) -> Intake:
@@ -208,112 +177,23 @@ def check_rank(site: Site) -> None:
         )
 
 
-def _sum(site: Site, intake: Intake, read: int, shape: Shape, cells: Sequence[Cell]) -> Summary:
-    return add_all(site.dossier.store, site.workplace, intake.executor, intake.listen, read, shape, cells)
-
-
 def _freeze_probe(site: Site, intake: Intake, read: int, shape: Shape, cells: Sequence[Cell]) -> None:
     """Freeze the probe of the next read, unless an earlier run did."""
     if dossier.probe_facts(site.dossier.store, site.dossier.design, read + 1) is None:
-        write_probe(site.dossier, _sum(site, intake, read, shape, cells), site.job.modes.rank, read + 1)
+        write_probe(site.dossier, sum_of(site, intake, read, shape, cells), site.job.modes.rank, read + 1)
 
 
-def _publish(
-    site: Site, intake: Intake, shape: Shape, cells: Sequence[Cell], probes: Sequence[str], started: datetime
-) -> Report:
-    facts = _identity_facts(site, intake, probes)
-    result_id = digest_value(facts)
-    prefix = layout.result_prefix(intake.ledger.number, result_id)
-    store = site.dossier.store
-    location = f"{site.job.dossier.location.rstrip('/')}/{prefix}"
-    if store.head(prefix + layout.MANIFEST) is not None:
-        intake.listen(Published(location, new=False))
-        return _report(site, intake, location, False, len(probes), {})
-    if shape.identity:
-        blocked_by_vanished(intake, cells)  # the coefficients are read again
-    summary = _sum(site, intake, len(probes), shape, cells)
-    finding = finding_of(
-        site.dossier, summary, site.job.modes.rank, "mean" not in site.job.modes.remove, intake.listen
-    )
-    rows_of = intake.rows_of(len(probes))
-    parts, spectrum = write_parts(
-        finding, shape, cells, rows_of, prefix, site.workplace, intake.executor, intake.listen
-    )
-    digests = put_all(store, prefix, result_tables(finding, spectrum.dominant_hz()))
-    digests |= {key.removeprefix(prefix): digest for key, digest in parts}
-    facts |= {
-        "id": result_id,
-        "ledger_number": intake.ledger.number,
-        "quality": quality(finding),
-        "set": [o for o in site.job.overrides if o.partition("=")[0].partition(".")[0].strip() == "modes"],
-        "blas": sorted(intake.cores | {core_type()}),
-        "shards": _shard_records(site, intake),
-    }
-    new = seal(store, prefix, manifest(facts, digests, _made(started, intake)))
-    intake.listen(Published(location, new=new))
-    return _report(site, intake, location, new, len(probes), facts["quality"])
-
-
-def _identity_facts(site: Site, intake: Intake, probes: Sequence[str]) -> dict[str, Any]:
-    """Return what the result id is the digest of."""
-    return {
-        "campaign": site.job.campaign,
-        "design": site.dossier.design.record(),
-        "design_digest": site.dossier.design.digest,
-        "inputs_digest": shards_digest([(s.key, s.info.version) for s in intake.shards.values()]),
-        "corrections": [],
-        "modes": site.job.modes_record(),
-        "probes": list(probes),
-        "reads": len(probes),
-        "software": intake.software,
-    }
-
-
-def _shard_records(site: Site, intake: Intake) -> list[dict[str, Any]]:
-    entries = (intake.ledger.shards[key] for key in sorted(intake.shards))
-    return [
-        {
-            "key": e.key,
-            "version": e.version,
-            "rows": e.rows,
-            "first": _instant(e.first),
-            "last": _instant(e.last),
-            "digest": e.digest,
-            "listed": e.key not in site.absent,
-        }
-        for e in entries
-    ]
-
-
-def _instant(value: int | None) -> str | None:
-    return None if value is None else moment(value)
-
-
-def _made(started: datetime, intake: Intake) -> dict[str, Any]:
-    ended = datetime.now(UTC)
-    return {
-        "start": started.isoformat(timespec="seconds"),
-        "end": ended.isoformat(timespec="seconds"),
-        "seconds": round((ended - started).total_seconds(), 3),
-        "host": socket.gethostname(),
-        "packages": {name: version(name) for name in PACKAGES},
-        "cells_read": intake.cells_read,
-        "bytes_read": intake.bytes_read,
-    }
-
-
-def _report(
-    site: Site, intake: Intake, location: str, new: bool, reads: int, numbers: dict[str, Any]
-) -> Report:
+def _report(site: Site, intake: Intake, end: Conclusion) -> Report:
     fresh = sum(1 for key, entry in intake.refused.items() if site.ledger.shards.get(key) != entry)
     return Report(
-        location=location,
-        new=new,
+        location=end.location,
+        new=end.new,
         ledger_number=intake.ledger.number,
-        reads=reads,
+        reads=end.reads,
         cells_read=intake.cells_read,
         bytes_read=intake.bytes_read,
         newly_refused=fresh,
         standing_refused=len(intake.refused) - fresh,
-        quality=numbers,
+        refused={key: found_in(entry) for key, entry in sorted(intake.refused.items())},
+        quality=end.quality,
     )

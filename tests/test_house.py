@@ -32,6 +32,7 @@ LAYERS = (
     "dossier plan budget ledger refusals publish",
     "block_cuts gather project tasks executor",
     "executor_ray site ingest sums finish",
+    "conclude",
     "run forecast",
     "results tarnmoor demo progress cli __init__ __main__",
 )

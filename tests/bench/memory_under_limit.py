@@ -93,6 +93,7 @@ def _print_table(plan: budget.Budget, peaks: Peaks, limit: str) -> bool:
         print("    " + ", ".join(f"{term} {size / MIB:.0f}" for term, size in terms.items()))
     kept = [
         _line(f"worker, largest (limit {limit})", plan.worker_bytes, peaks.worker),
+        _line("  resident, shared code included", plan.worker_bytes, peaks.resident),
         _line("driver", plan.driver_bytes, peaks.driver),
         _line("node: workers, driver, engine", plan.node_bytes, peaks.node),
     ]

@@ -1,15 +1,16 @@
 """Memory of a run's processes while it goes on: sampled from the kernel's own books, by phase of the run.
 
 Private bytes of a process are ``Private_Clean + Private_Dirty`` of ``/proc/PID/smaps_rollup``; the sum over a node is
-that of ``Pss``, which counts what processes share once.
+that of ``Pss``, which counts what processes share once. ``VmHWM`` of ``/proc/PID/status`` is the kernel's own high
+mark: no peak escapes it, and code that other processes map too is counted in full.
 """
 
 from __future__ import annotations
 
-import os
 import threading
 from collections import defaultdict
 from dataclasses import dataclass, field
+from pathlib import Path
 
 import psutil
 
@@ -19,9 +20,10 @@ LOOK_FOR_NEW_SECONDS = 0.5
 
 @dataclass
 class Peaks:
-    """Largest bytes seen: private ones of one worker by phase, of the driver, and shared-once sums over the node."""
+    """Largest bytes seen: private ones of one worker by phase and of the driver; sums over the node, shared once."""
 
     worker_by_phase: dict[str, int] = field(default_factory=lambda: defaultdict(int))
+    resident: int = 0
     driver: int = 0
     object_store: int = 0
     engine: int = 0
@@ -84,6 +86,7 @@ class Sampler:
             peaks.object_store = max(peaks.object_store, books.get("Pss_Shmem", 0))
             if role == "worker":
                 peaks.worker_by_phase[self.phase] = max(peaks.worker_by_phase[self.phase], private)
+                peaks.resident = max(peaks.resident, _in_bytes(f"/proc/{pid}/status").get("VmHWM", 0))
             elif role == "driver":
                 peaks.driver = max(peaks.driver, private)
             else:
@@ -94,16 +97,13 @@ class Sampler:
 
 def rollup(pid: int) -> dict[str, int]:
     """Return the memory books of a process in bytes; empty if it is gone."""
+    return _in_bytes(f"/proc/{pid}/smaps_rollup")
+
+
+def _in_bytes(path: str) -> dict[str, int]:
+    """Return the lines ``Name:  123 kB`` of a file of the kernel."""
     try:
-        with open(f"/proc/{pid}/smaps_rollup") as lines:
-            next(lines)
-            entries = (line.split() for line in lines)
-            return {entry[0].rstrip(":"): int(entry[1]) * 1024 for entry in entries}
-    except (FileNotFoundError, ProcessLookupError, PermissionError, StopIteration):
+        lines = [line.split() for line in Path(path).read_text().splitlines()]
+    except (FileNotFoundError, ProcessLookupError, PermissionError):
         return {}
-
-
-def own_private_bytes() -> int:
-    """Return the private bytes of this process now."""
-    books = rollup(os.getpid())
-    return books["Private_Clean"] + books["Private_Dirty"]
+    return {words[0].rstrip(":"): int(words[1]) * 1024 for words in lines if words[-1] == "kB"}

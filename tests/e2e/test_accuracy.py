@@ -7,6 +7,7 @@ times coefficients.
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Any
 
@@ -14,6 +15,7 @@ import numpy as np
 import pytest
 from campaigns import Found, even_times, job_text, run_job, with_spectrum, write_vector
 
+from shardfold.blas import one_thread
 from shardfold.executor_ray import RayExecutor
 from shardfold.store import open_store
 
@@ -22,6 +24,13 @@ pytestmark = pytest.mark.usefixtures("ray_workers")
 CHANNELS, SAMPLES, RANK = 3000, 6000, 10
 VALUES = 1 / np.arange(1.0, CHANNELS + 1) ** 2
 BEST = float(np.linalg.norm(VALUES[RANK:]))  # what the best rank 10 misses (Eckart and Young)
+
+
+@pytest.fixture(autouse=True)
+def one_thread_for_references() -> Iterator[None]:
+    """Keep the dense references to one thread: several that compete with the workers take ten times as long."""
+    with one_thread():
+        yield
 
 
 @dataclass(frozen=True)
