@@ -24,7 +24,7 @@ INTERPRETER_BYTES = 220 * MIB
 DRIVER_BYTES = 260 * MIB
 RAY_NODE_BYTES = 450 * MIB
 OBJECT_STORE_BYTES = 128 * MIB
-TRANSFER_BYTES = 36 * MIB
+TRANSFER_BYTES = 12 * MIB
 """Sub-ranges in flight while a row group is fetched."""
 
 

@@ -16,6 +16,7 @@ from typing import Protocol
 from shardfold.channels import ChannelTable, keep_names
 from shardfold.errors import InputError, NothingToRead, ShardRefused, VersionChanged
 from shardfold.ids import ObjectInfo, Shard
+from shardfold.job_places import pattern_regex
 from shardfold.readers import ByteSource, ChannelSettings, Reader
 from shardfold.readers.batch import some_names
 
@@ -168,24 +169,10 @@ def agree(shard: Shard, channels: Sequence[str]) -> None:
         )
 
 
-def glob_pattern(match: str) -> re.Pattern[str]:
-    """Return the regular expression of a glob over keys: ``*``, ``?``, ``[...]`` within a folder, ``**`` across."""
-    pieces = re.split(r"(\*\*/|\*\*|\*|\?|\[[^\]]+\])", match)
-    known = {"**/": "(?:.*/)?", "**": ".*", "*": "[^/]*", "?": "[^/]"}
-    return re.compile("".join(known.get(piece) or _class_or_text(piece) for piece in pieces) + r"\Z", re.DOTALL)
-
-
-def _class_or_text(piece: str) -> str:
-    if len(piece) > 2 and piece[0] == "[" and piece[-1] == "]":
-        inside = piece[1:-1].replace("\\", "\\\\")
-        return f"[^{inside[1:]}/]" if inside[0] in "!^" else f"[{inside}]"
-    return re.escape(piece)
-
-
 def _matching(store: Campaign, match: str) -> list[ObjectInfo]:
-    pattern = glob_pattern(match)
+    pattern = pattern_regex(match)
     folder = re.split(r"[*?\[]", match)[0].rpartition("/")
-    found = [info for info in store.list("".join(folder[:2])) if pattern.match(info.key)]
+    found = [info for info in store.list("".join(folder[:2])) if pattern.fullmatch(info.key)]
     if not found:
         there = [info.key for info in islice(store.list(), 3)]
         raise NothingToRead(

@@ -21,6 +21,7 @@ from shardfold.events import Found, Listener, Noted
 from shardfold.ids import Shard, digest_value
 from shardfold.inventory import Inventory, agree, take_inventory
 from shardfold.job import Job
+from shardfold.job_settings import TimeStart
 from shardfold.ledger import Entry, Ledger
 from shardfold.quantities import format_duration
 from shardfold.readers import reader_for
@@ -109,6 +110,8 @@ def look(job: Job, listen: Listener, *, sample: int | None = None) -> Site:
     shards, standing = _sort_out(inventory, state, under)
     if standing and not shards and not any(entry.state == "in" for entry in state.shards.values()):
         raise _nothing_readable(job, standing)
+    if isinstance(job.source.time, TimeStart) and inventory.listed > 1:
+        raise _one_start(inventory)
     listen(Found(len(shards), len(inventory.unsettled), len(standing)))
     opened = _open(job, store, inventory, table, stored)
     _check_agreement(shards, standing, opened, under, known)
@@ -192,6 +195,16 @@ def _tell(listen: Listener, inventory: Inventory, absent: list[str]) -> None:
 def _some(keys: Sequence[str]) -> str:
     """Return how many shards these are, and the names of the first few."""
     return f"{len(keys)} shard{'s' if len(keys) > 1 else ''} ({some_names(keys)})"
+
+
+def _one_start(inventory: Inventory) -> InputError:
+    return InputError(
+        "more than one shard would start at the same time",
+        where="source.time",
+        rule="start and step describe a single shard",
+        got=f"{inventory.listed} matching shards",
+        remedy="source.time: {from_name: REGEX, step: ...}, a time column, or a narrower source.match",
+    )
 
 
 def _nothing_readable(job: Job, standing: dict[str, Entry]) -> InputError:

@@ -18,8 +18,9 @@ import pytest
 from shardfold.channels import default_table
 from shardfold.errors import InputError, NothingToRead, ShardRefused, StorageFailed, VersionChanged
 from shardfold.ids import ObjectInfo, RowGroup, Shard
-from shardfold.inventory import Inventory, Refusal, agree, choose_channels, glob_pattern, take_inventory
+from shardfold.inventory import Inventory, Refusal, agree, choose_channels, take_inventory
 from shardfold.job import TimeColumn
+from shardfold.job_places import pattern_regex
 from shardfold.readers import reader_for
 from shardfold.store import StoreSettings, connect
 
@@ -79,7 +80,7 @@ def take(campaign: Campaign, match: str = "**/*.parquet", settle_ns: int = 0, **
 )
 def test_the_glob_matches_as_people_expect(match: str, keys: list[str]) -> None:
     there = ["a.parquet", "d/b.parquet", "d/e/c.parquet", "d/x(1)+.npy"]
-    assert [key for key in there if glob_pattern(match).match(key)] == keys
+    assert [key for key in there if pattern_regex(match).fullmatch(key)] == keys
 
 
 def test_only_the_folder_before_the_first_wildcard_is_listed() -> None:
