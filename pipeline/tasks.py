@@ -18,6 +18,7 @@ import numpy as np
 import numpy.typing as npt
 
 from shardfold import artifacts, layout
+from shardfold.allocator import lean_memory
 from shardfold.blas import check_core, core_type, one_thread
 from shardfold.channels import ChannelTable, read_table
 from shardfold.design import Design
@@ -141,7 +142,7 @@ Outcome: TypeAlias = CellRead | Added | PartWritten | Refusal
 def perform(workplace: Workplace, task: Task) -> Outcome:
     """Do a task and return its outcome; a refused shard is an outcome, every other failure is raised."""
     check_core(workplace.design.blas)
-    with one_thread():
+    with one_thread(), lean_memory():
         try:
             if isinstance(task, ReadCell):
                 return read_cell(workplace, task)

@@ -27,7 +27,7 @@ ROOT = Path(__file__).resolve().parents[1]
 # A module imports from its own layer and from those above it here, never from those below. Patterns; the first counts.
 LAYERS = (
     "errors ids events",
-    "job job_* yaml_* quantities layout store store_* local_s3 blas",
+    "job job_* yaml_* quantities layout store store_* local_s3 blas allocator",
     "readers readers.* inventory channels artifacts tables design",
     "dossier plan budget ledger refusals publish",
     "block_cuts gather project tasks executor",

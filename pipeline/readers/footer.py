@@ -76,9 +76,11 @@ def read_footer(store: ByteSource, info: ObjectInfo) -> Footer:
         start = info.size - footer_bytes - _TRAILER_BYTES
         tail = memoryview(store.read(info.key, version=info.version, start=start, stop=info.size))
     with refusing(info, "the footer cannot be read"):
-        metadata = pq.read_metadata(pa.BufferReader(tail[-(footer_bytes + _TRAILER_BYTES) :]))
+        file = pq.ParquetFile(pa.BufferReader(tail[-(footer_bytes + _TRAILER_BYTES) :]))
+        # Never ask for ``metadata.schema``: the two hold each other, and megabytes of a wide footer then wait for
+        # Python's cycle collector, which sees two small objects and takes its time.
+        metadata, schema = file.metadata, file.schema_arrow
         _is_whole(info, metadata, footer_bytes)
-        schema = metadata.schema.to_arrow_schema()
         leaves = _leaves(info, schema, metadata)
         rows = tuple(metadata.row_group(group).num_rows for group in range(metadata.num_row_groups))
     first_rows = tuple(accumulate(rows, initial=0))[:-1]
@@ -144,16 +146,18 @@ def gap_dtype(footer: Footer, leaves: Sequence[int], dtype: np.dtype[Any]) -> np
     One type for the whole shard, from the footer alone: integers become float32 if they have at most 16 bits, else
     float64.
     """
-    groups = range(len(footer.rows))
-    if dtype.kind in "iu" and any(_may_have_nulls(footer, group, leaf) for group in groups for leaf in leaves):
+    if dtype.kind not in "iu":
+        return dtype
+    fields = zip(footer.leaves, footer.schema, strict=True)
+    required = {leaf for below, field in fields if not (field.nullable or field.type.num_fields) for leaf in below}
+    asked = [leaf for leaf in leaves if leaf not in required]
+    if any(_may_have_nulls(footer, group, leaf) for group in range(len(footer.rows)) for leaf in asked):
         return np.dtype(np.result_type(dtype, np.float32))
     return dtype
 
 
 def _may_have_nulls(footer: Footer, group: int, leaf: int) -> bool:
     """Return whether a column chunk holds nulls, or does not say that it holds none."""
-    if footer.metadata.schema.column(leaf).max_definition_level == 0:
-        return False
     statistics = footer.metadata.row_group(group).column(leaf).statistics
     return statistics is None or not statistics.has_null_count or bool(statistics.null_count)
 
