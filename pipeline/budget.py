@@ -1,7 +1,7 @@
 """Peak bytes and work of a run, from shapes alone, before the first read; and the refusal that shows both numbers.
 
 A worker's private memory is the largest of three phases (read a cell, add up, write coefficients) on top of the
-interpreter with its libraries. The constants were measured (see DEVELOPERS.md, how to measure); a benchmark holds
+interpreter with its libraries. The constants were measured with ``tests/bench/memory_under_limit.py``, which holds
 reality below the promise.
 """
 
@@ -17,15 +17,29 @@ from shardfold.errors import PlanRefused
 from shardfold.kernels import cost
 from shardfold.kernels.whole import Shape, stored_dtype
 from shardfold.plan import TREE_BITS, Cell
-from shardfold.readers import group_peak_bytes
+from shardfold.readers import shard_peak_bytes
 
 MIB = 1024 * 1024
-INTERPRETER_BYTES = 220 * MIB
+
+INTERPRETER_BYTES = 240 * MIB
+"""A worker between tasks, once it has done some: 133 to 168 MiB of its own (72 before the first), and some 95 MiB of
+code, which it shares with other processes of the same installation and would hold alone on a node of its own."""
+
 DRIVER_BYTES = 260 * MIB
+"""The driver before it holds a sum or thousands of shards: 140 to 191 MiB of its own, and the same code."""
+
 RAY_NODE_BYTES = 450 * MIB
+"""Ray's own processes on a node, counted once where they share: 276 to 340 MiB with two workers."""
+
 OBJECT_STORE_BYTES = 128 * MIB
+"""What a local Ray may take of shared memory; tasks and outcomes are small, and 2 MiB of it were ever in use."""
+
 TRANSFER_BYTES = 12 * MIB
-"""Sub-ranges in flight while a row group is fetched."""
+"""Bodies of answers on their way into a row group's place: four requests at once, a MiB or two each."""
+
+SHARD_BYTES, GROUP_BYTES, CELL_BYTES = 2048, 256, 2048
+"""What the driver holds of a shard, of each of its row groups, and of a cell (measured: 450, 230 and 660; the rest is for
+the ledger's entry and the manifest's record)."""
 
 
 @dataclass(frozen=True)
@@ -86,7 +100,7 @@ def budget(design: Design, shape: Shape, cells: Sequence[Cell], rank: int, worke
         "add up": {"interpreter": INTERPRETER_BYTES, "sums held at once": (TREE_BITS + 4) * summary},
         "coefficients": _coefficient_phase(design, shape, cells, rank),
     }
-    driver = DRIVER_BYTES + cost.finish_bytes(shape) + sum(1024 + 64 * len(c.pieces) for c in cells)
+    driver = DRIVER_BYTES + cost.finish_bytes(shape) + sum(map(_records_bytes, cells))
     return Budget(phases, driver, 0 if serial else OBJECT_STORE_BYTES, workers)
 
 
@@ -103,8 +117,8 @@ def check(plan: Budget, limit_bytes: int, cells: Sequence[Cell]) -> None:
     phase, term, size = plan.largest
     where = ""
     if term == "row group":
-        cell = max(cells, key=_largest_group)
-        piece = max(cell.pieces, key=lambda p: max(group_peak_bytes(g) for g in p.shard.groups))
+        pieces = (piece for cell in cells for piece in cell.pieces)
+        piece = max(pieces, key=lambda p: max(g.stored_bytes + g.decoded_bytes for g in p.shard.groups))
         where = f" (the largest row group is in {piece.shard.key})"
     raise PlanRefused(
         "a worker would need more memory than it may have; nothing was read",
@@ -125,8 +139,21 @@ _REMEDIES = {
 }
 
 
-def _largest_group(cell: Cell) -> int:
-    return max((group_peak_bytes(g) for piece in cell.pieces for g in piece.shard.groups), default=0)
+def _largest_group(layout: str, cells: Sequence[Cell]) -> int:
+    return max((_group_bytes(layout, cell) for cell in cells), default=0) + TRANSFER_BYTES
+
+
+def _group_bytes(layout: str, cell: Cell) -> int:
+    """Return what reading a cell holds of its shards at most."""
+    most = max(shard_peak_bytes(piece.shard, layout) for piece in cell.pieces)
+    groups = [g for piece in cell.pieces for start, stop in piece.runs for g in piece.shard.groups[start:stop]]
+    # An array as fetched is the batch; the bound's second one is the next on its way, of which there may be none.
+    return most - groups[0].stored_bytes if layout == "array" and len(groups) == 1 else most
+
+
+def _records_bytes(cell: Cell) -> int:
+    groups = sum(len(piece.shard.groups) for piece in cell.pieces)
+    return CELL_BYTES + SHARD_BYTES * len(cell.pieces) + GROUP_BYTES * groups
 
 
 def _read_phase(design: Design, shape: Shape, cells: Sequence[Cell], summary: int) -> dict[str, int]:
@@ -134,27 +161,29 @@ def _read_phase(design: Design, shape: Shape, cells: Sequence[Cell], summary: in
     x_bytes = max((_x_bytes(shape, cell) for cell in cells), default=0)
     return {
         "interpreter": INTERPRETER_BYTES,
-        "row group": max(map(_largest_group, cells), default=0) + TRANSFER_BYTES,
+        "row group": _largest_group(design.layout, cells),
         "block": shape.m * design.block_samples * itemsize,
         "kernel": cost.fold_bytes(shape, design.block_samples, itemsize),
         "summary": 2 * summary,
         "probe": 0 if shape.identity else shape.k * shape.m * 12 + shape.q_theta * shape.m * 8,
-        "stored X": 3 * x_bytes,
+        # Beside its own place, X is in the record that is written; when that is sent, only there and in the request.
+        "stored X": 2 * x_bytes,
     }
 
 
 def _coefficient_phase(design: Design, shape: Shape, cells: Sequence[Cell], rank: int) -> dict[str, int]:
     rows: dict[int, int] = {}
-    x_bytes: dict[int, int] = {}
     for cell in cells:
         rows[cell.leaf] = rows.get(cell.leaf, 0) + cell.rows
-        x_bytes[cell.leaf] = x_bytes.get(cell.leaf, 0) + _x_bytes(shape, cell)
-    group = max(map(_largest_group, cells), default=0) + TRANSFER_BYTES if shape.identity else 0
+    x_bytes = max((_x_bytes(shape, cell) for cell in cells), default=0)
+    # Without times every sample carries its shard's name: in UTF-32 while parts are joined and sorted, then as text.
+    names = 0 if design.timed else 12 * max((len(p.shard.key) for c in cells for p in c.pieces), default=0) + 128
+    group = _largest_group(design.layout, cells) if shape.identity else 0
     return {
         "interpreter": INTERPRETER_BYTES,
         "row group": group + (design.block_samples * shape.m * 16 if shape.identity else 0),
-        "X of a leaf": 2 * max(x_bytes.values(), default=0),
-        "coefficients of a leaf": 5 * (rank + 2) * 8 * max(rows.values(), default=0),
+        "X of a leaf": x_bytes,
+        "coefficients of a leaf": (5 * (rank + 2) * 8 + names) * max(rows.values(), default=0),
     }
 
 

@@ -3,7 +3,8 @@
 Run ``python tests/bench/run_against_reading.py``. It starts an S3 server and a local Ray, writes one vector campaign
 per compression, and in turn reads it through the package's readers (one task per shard, so many at once as there are
 workers) and runs it into a new dossier: inventory, sums, modes, coefficients, result and all. The engine's start is in
-neither. It prints every pair and the ratios, by the clock and by processor time (driver, workers and S3 server).
+neither. It prints every pair and the ratios, by the clock and by processor time (driver, workers and S3 server), and
+the share of the machine that others took meanwhile: a pair counts for what it says only where that is small.
 """
 
 from __future__ import annotations
@@ -33,10 +34,11 @@ from shardfold.store import connect
 
 @dataclass(frozen=True)
 class Cost:
-    """What something took."""
+    """What something took: seconds by the clock and of processors, and the share of the machine that others took."""
 
     wall: float
     processor: float
+    others: float
 
 
 def main() -> None:
@@ -72,7 +74,9 @@ def _compare(campaign: big_campaign.Campaign, endpoint: str, workers: int, repea
         if repeat == 0:
             continue  # imports and first connections
         pairs.append((reading, whole))
-        _line("wall", reading.wall, whole.wall, "   processor", reading.processor, whole.processor)
+        _line("wall", reading.wall, whole.wall)
+        _line(", processor", reading.processor, whole.processor)
+        print(f", others {reading.others:.0%} and {whole.others:.0%}")
     walls, processor = [w.wall / r.wall for r, w in pairs], [w.processor / r.processor for r, w in pairs]
     rate = campaign.values_bytes / median(whole.wall for _, whole in pairs) / 1e6
     print(
@@ -81,10 +85,8 @@ def _compare(campaign: big_campaign.Campaign, endpoint: str, workers: int, repea
     print("  the last run: " + ", ".join(f"{stage} {seconds:.1f} s" for stage, seconds in stages.items()))
 
 
-def _line(*parts: Any) -> None:
-    """Print what reading and the run took, by each clock, and the ratio."""
-    columns = zip(parts[::3], parts[1::3], parts[2::3], strict=True)
-    print("  " + "".join(f"{name}: reading {r:6.1f} s, run {w:6.1f} s, ratio {w / r:.2f}" for name, r, w in columns))
+def _line(name: str, reading: float, whole: float) -> None:
+    print(f"  {name}: reading {reading:.1f} s, run {whole:.1f} s, ratio {whole / reading:.2f}", end="")
 
 
 def _job(campaign: big_campaign.Campaign, bucket: str, endpoint: str, workers: int, repeat: int) -> Job:
@@ -98,12 +100,19 @@ engine: {{workers: {workers}}}
 
 
 def _cost(work: Callable[..., None], *arguments: Any) -> Cost:
-    before, begin = _processor_seconds(), time.perf_counter()
+    busy, own, begin = _busy_seconds(), _own_seconds(), time.perf_counter()
     work(*arguments)
-    return Cost(time.perf_counter() - begin, _processor_seconds() - before)
+    wall, own = time.perf_counter() - begin, _own_seconds() - own
+    return Cost(wall, own, max(0.0, _busy_seconds() - busy - own) / (wall * psutil.cpu_count()))
 
 
-def _processor_seconds() -> float:
+def _busy_seconds() -> float:
+    """Return what all processors of the machine have been busy for, time taken by a hypervisor included."""
+    times = psutil.cpu_times()
+    return sum(times) - times.idle - times.iowait - times.guest - times.guest_nice
+
+
+def _own_seconds() -> float:
     """Return what this process and all that it started have used; the workers live on from repeat to repeat."""
     me = psutil.Process()
     times = [process.cpu_times() for process in (me, *me.children(recursive=True))]
