@@ -38,8 +38,8 @@ TRANSFER_BYTES = 12 * MIB
 """Bodies of answers on their way into a row group's place: four requests at once, a MiB or two each."""
 
 SHARD_BYTES, GROUP_BYTES, CELL_BYTES = 2048, 256, 2048
-"""What the driver holds of a shard, of each of its row groups, and of a cell (measured: 450, 230 and 660; the rest is for
-the ledger's entry and the manifest's record)."""
+"""What the driver holds of a shard, of each of its row groups, and of a cell (measured: 450, 230 and 660; the rest is
+for the ledger entry and the record in the manifest)."""
 
 
 @dataclass(frozen=True)

@@ -236,11 +236,8 @@ def write_coefficients(workplace: Workplace, task: WriteCoefficients) -> PartWri
     desk = _desk(workplace)
     before = desk.campaign.snapshot().bytes_read
     make = _coefficients_by_reading if task.shape.identity else _coefficients_of_x
-    parts = [make(workplace, desk, cell, task) for cell in task.cells]
-    times, owners, values = (np.concatenate(arrays, axis=-1) for arrays in zip(*parts, strict=True))
     timed = workplace.design.timed
-    order = np.argsort(times, kind="stable") if timed else np.lexsort((times, owners))
-    times, owners, values = times[order], owners[order], values[:, order]
+    times, owners, values = _in_order([make(workplace, desk, cell, task) for cell in task.cells], timed)
     shards = None if timed else [str(owner) for owner in owners]
     data = coefficient_table(times, shards, values, workplace.design.zoned, task.unit)
     desk.dossier.put(task.key, data)
@@ -255,6 +252,17 @@ def write_coefficients(workplace: Workplace, task: WriteCoefficients) -> PartWri
         segments,
         desk.campaign.snapshot().bytes_read - before,
     )
+
+
+def _in_order(parts: list[tuple[Array, ...]], timed: bool) -> tuple[Array, ...]:
+    """Join times, owners and coefficients and sort them by time, or by owner and row; copied only where need be."""
+    if len(parts) > 1:
+        parts = [tuple(np.concatenate(arrays, axis=-1) for arrays in zip(*parts, strict=True))]
+    times, owners, values = parts.pop()
+    order = np.argsort(times, kind="stable") if timed else np.lexsort((times, owners))
+    if np.array_equal(order, np.arange(len(order))):
+        return times, owners, values
+    return times[order], owners[order], values[:, order]
 
 
 def _coefficients_of_x(workplace: Workplace, desk: _Desk, cell: Cell, task: WriteCoefficients) -> tuple[Array, ...]:

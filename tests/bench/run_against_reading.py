@@ -5,12 +5,16 @@ per compression, and in turn reads it through the package's readers (one task pe
 workers) and runs it into a new dossier: inventory, sums, modes, coefficients, result and all. The engine's start is in
 neither. It prints every pair and the ratios, by the clock and by processor time (driver, workers and S3 server), and
 the share of the machine that others took meanwhile: a pair counts for what it says only where that is small.
+
+On one machine the S3 server shares the processors with the workers, and nothing waits for a network. ``--link 100``
+lets each worker wait in every read as if its bytes came at 100 MB/s, which takes no processor time.
 """
 
 from __future__ import annotations
 
 import argparse
 import os
+import threading
 import time
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
@@ -30,6 +34,7 @@ from shardfold.readers import reader_for
 from shardfold.run import run
 from shardfold.site import look, settings
 from shardfold.store import connect
+from shardfold.store_s3 import S3Adapter
 
 
 @dataclass(frozen=True)
@@ -48,9 +53,14 @@ def main() -> None:
     parser.add_argument("--compressions", nargs="+", default=["none", "zstd"])
     parser.add_argument("--workers", type=int, default=2)
     parser.add_argument("--repeats", type=int, default=3)
+    parser.add_argument("--link", type=float, default=0.0, help="MB/s of one worker's reads; 0: as fast as they come")
     given = parser.parse_args()
     with Seaweed() as server:
         os.environ.update(server.environment)
+        if given.link:
+            # Ray passes the hook to every worker; the executor then finds Ray running.
+            hook = {"worker_process_setup_hook": _slow_link(given.link * 1e6)}
+            ray.init(num_cpus=given.workers, include_dashboard=False, log_to_driver=False, runtime_env=hook)
         engine = RayExecutor(given.workers, None)
         try:
             for compression in given.compressions:
@@ -59,6 +69,25 @@ def main() -> None:
                 _compare(campaign, server.endpoint, given.workers, given.repeats)
         finally:
             engine.close()
+            ray.shutdown()
+
+
+def _slow_link(bytes_per_second: float) -> Callable[[], None]:
+    """Return what makes the reads of a process take at least as long as a link would that its threads share."""
+
+    def slow_down() -> None:
+        read, link = S3Adapter.read, threading.Lock()
+
+        def late(*arguments: Any) -> memoryview:
+            with link:
+                begin = time.perf_counter()
+                data = read(*arguments)
+                time.sleep(max(0.0, begin + len(data) / bytes_per_second - time.perf_counter()))
+            return data
+
+        S3Adapter.read = late  # type: ignore[method-assign]
+
+    return slow_down
 
 
 def _compare(campaign: big_campaign.Campaign, endpoint: str, workers: int, repeats: int) -> None:
