@@ -17,12 +17,12 @@ from shardfold.errors import PlanRefused
 from shardfold.kernels import cost
 from shardfold.kernels.whole import Shape, stored_dtype
 from shardfold.plan import TREE_BITS, Cell
-from shardfold.readers import shard_peak_bytes
+from shardfold.readers import group_peak_bytes, shard_peak_bytes
 
 MIB = 1024 * 1024
 
 INTERPRETER_BYTES = 240 * MIB
-"""A worker between tasks, once it has done some: 133 to 168 MiB of its own (72 before the first), and some 95 MiB of
+"""A worker between tasks, once it has done some: 125 to 158 MiB of its own (72 before the first), and some 95 MiB of
 code, which it shares with other processes of the same installation and would hold alone on a node of its own."""
 
 DRIVER_BYTES = 260 * MIB
@@ -40,6 +40,9 @@ TRANSFER_BYTES = 12 * MIB
 SHARD_BYTES, GROUP_BYTES, CELL_BYTES = 2048, 256, 2048
 """What the driver holds of a shard, of each of its row groups, and of a cell (measured: 450, 230 and 660; the rest is
 for the ledger entry and the record in the manifest)."""
+
+FOOTERS_AT_ONCE = 16
+"""Shards that the inventory describes at the same time."""
 
 
 @dataclass(frozen=True)
@@ -100,7 +103,8 @@ def budget(design: Design, shape: Shape, cells: Sequence[Cell], rank: int, worke
         "add up": {"interpreter": INTERPRETER_BYTES, "sums held at once": (TREE_BITS + 4) * summary},
         "coefficients": _coefficient_phase(design, shape, cells, rank),
     }
-    driver = DRIVER_BYTES + cost.finish_bytes(shape) + sum(map(_records_bytes, cells))
+    describing = FOOTERS_AT_ONCE * max((_footer_bytes(design.layout, cell) for cell in cells), default=0)
+    driver = DRIVER_BYTES + max(describing, cost.finish_bytes(shape)) + sum(map(_records_bytes, cells))
     return Budget(phases, driver, 0 if serial else OBJECT_STORE_BYTES, workers)
 
 
@@ -149,6 +153,12 @@ def _group_bytes(layout: str, cell: Cell) -> int:
     groups = [g for piece in cell.pieces for start, stop in piece.runs for g in piece.shard.groups[start:stop]]
     # An array as fetched is the batch; the bound's second one is the next on its way, of which there may be none.
     return most - groups[0].stored_bytes if layout == "array" and len(groups) == 1 else most
+
+
+def _footer_bytes(layout: str, cell: Cell) -> int:
+    """Return the largest footer, of which the readers' bound counts two beside a row group."""
+    shards = (piece.shard for piece in cell.pieces)
+    return max((shard_peak_bytes(s, layout) - max(map(group_peak_bytes, s.groups))) // 2 for s in shards)
 
 
 def _records_bytes(cell: Cell) -> int:

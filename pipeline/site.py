@@ -14,6 +14,7 @@ from pathlib import Path
 
 from shardfold import dossier as dossiers
 from shardfold import ledger
+from shardfold.allocator import lean_memory
 from shardfold.channels import ChannelTable
 from shardfold.dossier import Dossier
 from shardfold.errors import InputError, ShardRefused
@@ -103,9 +104,10 @@ def look(job: Job, listen: Listener, *, sample: int | None = None) -> Site:
     names = table.names if table is not None else ()
     reader = reader_for(job.source, names)
     known = {} if stored is None else {k: replace(s, channels=stored.table.names) for k, s in state.known().items()}
-    inventory = take_inventory(
-        campaign, reader, job.source.match, job.source.settle_ns, time.time(), known=known, limit=sample
-    )
+    with lean_memory():
+        inventory = take_inventory(
+            campaign, reader, job.source.match, job.source.settle_ns, time.time(), known=known, limit=sample
+        )
     under = digest_value(job.design_record())
     shards, standing = _sort_out(inventory, state, under)
     if standing and not shards and not any(entry.state == "in" for entry in state.shards.values()):
