@@ -107,7 +107,8 @@ class Result:
         """
         names = self.modes.column("channel").to_pylist()
         chosen = list(channels) if channels is not None else names
-        missing = [name for name in chosen if name not in set(names)]
+        row_of = {name: row for row, name in enumerate(names)}
+        missing = [name for name in chosen if name not in row_of]
         if missing:
             raise InputError(
                 "a channel is not in the result",
@@ -115,7 +116,7 @@ class Result:
                 rule="names of the column 'channel' of modes.parquet",
                 got=", ".join(missing[:3]),
             )
-        rows = [names.index(name) for name in chosen]
+        rows = [row_of[name] for name in chosen]
         held = self.manifest["quality"]["modes"]
         rank = len(self.mode_table)
         series = self.coefficients(start, stop)
@@ -169,14 +170,25 @@ def open_result(location: str, endpoint: str | None = None) -> Result:
     InputError
         If there is no published result there.
     """
-    text = location.rstrip("/")
-    root, _, rest = text.partition("/results/") if "/results/" in text else (text.removesuffix("/latest"), "", "")
+    root, folder = split_location(location)
     store = connect(StoreSettings(root, endpoint))
-    folder = f"{layout.RESULTS}{rest}/" if rest and rest != "latest" else _latest(store, location)
+    folder = folder or _latest(store, location)
     if store.head(folder + layout.MANIFEST) is None:
         raise _no_result(location, f"no {layout.MANIFEST} in {folder}")
     manifest = json.loads(bytes(store.read(folder + layout.MANIFEST)))
     return Result(store, folder, f"{root}/{folder}", manifest)
+
+
+def split_location(location: str) -> tuple[str, str]:
+    """Return the dossier of a result's location, and the result's folder in it, empty for the latest.
+
+    Only the end of the location is looked at: buckets and folders may be called ``results`` as well.
+    """
+    text = location.rstrip("/")
+    root, _, name = text.rpartition(f"/{layout.RESULTS}")
+    if root and layout.parse_manifest(f"{layout.RESULTS}{name}/{layout.MANIFEST}") is not None:
+        return root, f"{layout.RESULTS}{name}/"
+    return text.removesuffix("/latest"), ""
 
 
 def _latest(store: Store, location: str) -> str:
