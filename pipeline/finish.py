@@ -19,7 +19,7 @@ from shardfold.kernels.blocks import Preparation
 from shardfold.kernels.factors import finish, next_probe
 from shardfold.kernels.spectra import dominant_frequency
 from shardfold.kernels.whole import Shape, Summary
-from shardfold.plan import Cell
+from shardfold.plan import Cell, by_leaf
 from shardfold.publish import Finding
 from shardfold.refusals import changed_between_reads
 from shardfold.tasks import CoefficientMap, Outcome, PartWritten, Refusal, Task, Workplace, WriteCoefficients
@@ -94,18 +94,18 @@ def write_parts(
     """
     segment = _segment(rows_of) if workplace.design.timed else 0
     mapping = coefficient_map(finding, shape)
-    leaves = [leaf for leaf, rows in sorted(rows_of.items()) if rows]
+    filled = ((leaf, group) for leaf, group in by_leaf(cells).items() if rows_of[leaf])
     tasks = [
         WriteCoefficients(
             prefix + layout.part_name(index),
             leaf,
-            tuple(cell for cell in cells if cell.leaf == leaf),
+            group,
             shape,
             mapping,
             segment,
             finding.unit,
         )
-        for index, leaf in enumerate(leaves)
+        for index, (leaf, group) in enumerate(filled)
     ]
     again = sum(cell.stored_bytes for cell in cells) if shape.identity else 0
     listen(StageStarted("coefficients", len(tasks), again))

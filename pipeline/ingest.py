@@ -21,7 +21,7 @@ from shardfold.gather import check_repeats
 from shardfold.ids import Shard, digest_bytes
 from shardfold.kernels.whole import Shape
 from shardfold.ledger import Entry, Leaf, LeafState, Ledger, commit, difference, load
-from shardfold.plan import Cell, bytes_to_read, cut
+from shardfold.plan import Cell, by_leaf, bytes_to_read, cut
 from shardfold.refusals import beside_vanished, changed_between_reads, message_of, nothing_left, refusal_of, vanished
 from shardfold.store import Store
 from shardfold.tasks import CellRead, ReadCell, Refusal, Workplace
@@ -203,17 +203,15 @@ def _commit(intake: Intake, read: int, cells: Sequence[Cell], final: bool = Fals
 
 def _leaf_states(intake: Intake, read: int, cells: Sequence[Cell]) -> dict[Leaf, LeafState]:
     """Return the state of each leaf; rows of a leaf that is in the ledger with these cells are not asked for again."""
-    names: dict[Leaf, list[Cell]] = {}
-    for cell in cells:
-        names.setdefault((read, cell.leaf), []).append(cell)
     states = {}
-    for leaf, group in names.items():
+    for number, group in by_leaf(cells).items():
+        leaf, names = (read, number), tuple(cell.name for cell in group)
         before = intake.ledger.leaves.get(leaf)
-        if before is not None and before.cells == tuple(cell.name for cell in group):
+        if before is not None and before.cells == names:
             states[leaf] = before
             continue
         rows = sum(record["rows"] for cell in group for record in _records(intake, cell))
-        states[leaf] = LeafState(tuple(cell.name for cell in group), rows)
+        states[leaf] = LeafState(names, rows)
     return states
 
 
@@ -307,11 +305,8 @@ def _rivals(intake: Intake, read: int, cells: Sequence[Cell]) -> dict[int, Shard
     """Return refusals of shards that repeat a time of another cell, by leaf; leaves committed so have none."""
     if read > 1 or not intake.workplace.design.timed:
         return {}
-    by_leaf: dict[int, list[Cell]] = {}
-    for cell in cells:
-        by_leaf.setdefault(cell.leaf, []).append(cell)
     refusals = {}
-    for leaf, group in by_leaf.items():
+    for leaf, group in by_leaf(cells).items():
         before = intake.ledger.leaves.get((read, leaf))
         if len(group) < 2 or (before is not None and before.cells == tuple(cell.name for cell in group)):
             continue

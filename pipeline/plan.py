@@ -90,13 +90,6 @@ class Cutting:
     cells: tuple[Cell, ...]
     refused: tuple[ShardRefused, ...]
 
-    def leaves(self) -> dict[int, tuple[Cell, ...]]:
-        """Return the cells of each leaf, leaves and cells in their fixed order."""
-        found: dict[int, list[Cell]] = defaultdict(list)
-        for cell in self.cells:
-            found[cell.leaf].append(cell)
-        return {leaf: tuple(cells) for leaf, cells in sorted(found.items())}
-
 
 def cut(shards: Sequence[Shard], design: Design, read: int, shape: Shape, probe_digest: str) -> Cutting:
     """Return the cells of one read.
@@ -114,22 +107,30 @@ def cut(shards: Sequence[Shard], design: Design, read: int, shape: Shape, probe_
     probe_digest : str
         Digest of its frozen probe; part of every cell's name.
     """
-    by_leaf: dict[int, list[Piece]] = defaultdict(list)
+    pieces_of: dict[int, list[Piece]] = defaultdict(list)
     refused = []
     for shard in sorted(shards, key=lambda s: s.key):
         try:
             for leaf, piece in _pieces(shard, design):
-                by_leaf[leaf].append(piece)
+                pieces_of[leaf].append(piece)
         except ShardRefused as error:
             refused.append(error)
     large = LARGE_PIECE_RATIO * summary_bytes(shape)
     cells = []
-    for leaf, pieces in sorted(by_leaf.items()):
+    for leaf, pieces in sorted(pieces_of.items()):
         alone = [(piece,) for piece in pieces if piece.decoded_bytes >= large]
         together = tuple(piece for piece in pieces if piece.decoded_bytes < large)
         for group in sorted([*alone, *([together] if together else [])], key=lambda g: g[0].shard.key):
             cells.append(Cell(read, leaf, group, _cell_name(design, read, leaf, group, probe_digest)))
     return Cutting(tuple(cells), tuple(refused))
+
+
+def by_leaf(cells: Iterable[Cell]) -> dict[int, tuple[Cell, ...]]:
+    """Return the cells of each leaf, leaves and cells in the order in which they are summed."""
+    found: dict[int, list[Cell]] = defaultdict(list)
+    for cell in cells:
+        found[cell.leaf].append(cell)
+    return {leaf: tuple(group) for leaf, group in sorted(found.items())}
 
 
 def tree(read: int, leaves: dict[int, tuple[str, ...]], kernel: int) -> tuple[tuple[Node, ...], ...]:

@@ -11,7 +11,7 @@ from shardfold import layout
 from shardfold.events import Listener, StageDone, StageStarted, TaskDone
 from shardfold.executor import Executor
 from shardfold.kernels.whole import Shape, Summary
-from shardfold.plan import Cell, tree
+from shardfold.plan import Cell, by_leaf, tree
 from shardfold.store import Store
 from shardfold.tasks import AddUp, Workplace, load_summary
 
@@ -42,7 +42,4 @@ def add_all(
 
 def leaf_names(cells: Sequence[Cell]) -> dict[int, tuple[str, ...]]:
     """Return the cell names of each leaf, in the order in which they are summed."""
-    names: dict[int, tuple[str, ...]] = {}
-    for cell in cells:
-        names[cell.leaf] = (*names.get(cell.leaf, ()), cell.name)
-    return dict(sorted(names.items()))
+    return {leaf: tuple(cell.name for cell in group) for leaf, group in by_leaf(cells).items()}

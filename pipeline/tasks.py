@@ -224,8 +224,7 @@ def load_summary(store: Store, key: str, kind: str, shape: Shape) -> Summary:
     """Return the summary of a stored cell or sum, without its X; the arrays are owned and writable."""
     header = artifacts.read_header(store, key, kind)
     names = [name for name in header.arrays if name in _SUMMARY_ARRAYS]
-    arrays = artifacts.read_arrays(store, key, header, names)
-    return from_arrays(shape, {name: array.copy(order="K") for name, array in arrays.items()})
+    return from_arrays(shape, artifacts.read_arrays(store, key, header, names))
 
 
 _SUMMARY_ARRAYS = ("n", "mean", "energy", "outer", "inner", "right_mean", "low", "high", "gaps")
@@ -309,6 +308,7 @@ def _each_batch(desk: _Desk, cell: Cell, sink: CellGather | CellProjector) -> No
                 ahead = ahead or thread.submit(next, groups, None)
                 sink.take(batch, cell.leaf, piece.inside)
                 del batch
+            ahead = ahead or thread.submit(next, groups, None)  # a row group without a batch must not end the cell
 
 
 def _fetched(desk: _Desk, cell: Cell) -> Iterator[tuple[Piece, Fetched]]:

@@ -8,7 +8,6 @@ figures are held against limits, here they are printed.
 
 from __future__ import annotations
 
-import importlib.util
 import os
 import sys
 from pathlib import Path
@@ -17,24 +16,15 @@ from typing import Any
 
 import numpy as np
 
+sys.path.insert(0, str(Path(__file__).parents[1]))
+sys.path.insert(0, str(Path(__file__).parents[1] / "e2e"))
+
+import test_accuracy as test
+
 from shardfold.local_s3 import Seaweed
 
-TESTS = Path(__file__).resolve().parents[1]
 
-
-def accuracy_test() -> Any:
-    """Return the test module whose campaigns are measured."""
-    sys.path.insert(0, str(TESTS))
-    spec = importlib.util.spec_from_file_location("test_accuracy", TESTS / "e2e" / "test_accuracy.py")
-    assert spec is not None
-    assert spec.loader is not None
-    module = importlib.util.module_from_spec(spec)
-    sys.modules["test_accuracy"] = module
-    spec.loader.exec_module(module)
-    return module
-
-
-def print_reads(test: Any, place: Any) -> None:
+def print_reads(place: Any) -> None:
     """Print excess error and energies of 3,000 x 6,000 with singular values 1/j^2."""
     matrix = test.with_spectrum(3000, 6000, test.VALUES)
     offset = np.random.Generator(np.random.PCG64(1)).standard_normal((3000, 1))
@@ -53,7 +43,7 @@ def print_reads(test: Any, place: Any) -> None:
             )
 
 
-def print_offsets(test: Any, place: Any) -> None:
+def print_offsets(place: Any) -> None:
     """Print how far an offset turns the first five modes of 400 x 3,000 (largest sine), one read."""
     for dtype in ("float64", "float32"):
         for offset in (0, 1e2, 1e4, 1e6):
@@ -68,7 +58,6 @@ def print_offsets(test: Any, place: Any) -> None:
 
 def main() -> None:
     """Measure and print."""
-    test = accuracy_test()
     with Seaweed() as server:
         os.environ.update(server.environment)
         server.make_bucket("figures")
@@ -77,8 +66,8 @@ def main() -> None:
         def place() -> Any:
             return SimpleNamespace(location=f"s3://figures/{next(numbers)}", endpoint=server.endpoint)
 
-        print_reads(test, place)
-        print_offsets(test, place)
+        print_reads(place)
+        print_offsets(place)
 
 
 if __name__ == "__main__":

@@ -9,32 +9,22 @@ read again, no half-written object, no result without a manifest.
 from __future__ import annotations
 
 import argparse
-import importlib.util
 import os
 import sys
 import tempfile
 from pathlib import Path
 from types import SimpleNamespace
-from typing import Any
 
 import numpy as np
 
+sys.path.insert(0, str(Path(__file__).parents[1]))
+sys.path.insert(0, str(Path(__file__).parents[1] / "e2e"))
+
+import test_killed_runs as test
+from sniffing_proxy import SniffingProxy
+
 from shardfold.local_s3 import Seaweed
 from shardfold.store import open_store
-
-TESTS = Path(__file__).resolve().parents[1]
-
-
-def killed_test() -> Any:
-    """Return the test module whose campaign and checks are used."""
-    sys.path.insert(0, str(TESTS))
-    spec = importlib.util.spec_from_file_location("test_killed_runs", TESTS / "e2e" / "test_killed_runs.py")
-    assert spec is not None
-    assert spec.loader is not None
-    module = importlib.util.module_from_spec(spec)
-    sys.modules["test_killed_runs"] = module
-    spec.loader.exec_module(module)
-    return module
 
 
 def main() -> None:
@@ -43,9 +33,6 @@ def main() -> None:
     parser.add_argument("--kills", type=int, default=10)
     parser.add_argument("--seed", type=int, default=2031)
     arguments = parser.parse_args()
-    test = killed_test()
-    from sniffing_proxy import SniffingProxy
-
     with Seaweed() as server, SniffingProxy(server.endpoint) as proxy, tempfile.TemporaryDirectory() as folder:
         os.environ.update(server.environment)
         server.make_bucket("killed")
