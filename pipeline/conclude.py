@@ -1,6 +1,7 @@
 """The end of a run: from the cells of the last read to a published result, or to the one that stands already.
 
-The result's id is the digest of what went in, so the same inputs find the same result, whichever commit they stand in.
+The result's id is the digest of what went in, so the same inputs find the result that stands, also after a commit that
+changed nothing of them.
 """
 
 from __future__ import annotations
@@ -101,13 +102,18 @@ def _write(
 
 
 def _standing(store: Store, result_id: str) -> str | None:
-    """Return the folder of the published result with this id, or ``None``."""
-    for info in store.list(layout.RESULTS):
-        found = layout.parse_manifest(info.key)
-        if found is None or not found[1].endswith(f"-{result_id[:8]}/"):
+    """Return the folder of the published result with this id, or ``None``.
+
+    Only results of the highest ledger number count: where a newer one stands, an older one with the same inputs is
+    published again, or ``latest`` would go on showing what is no longer in.
+    """
+    published = [found for info in store.list(layout.RESULTS) if (found := layout.parse_manifest(info.key)) is not None]
+    newest = max((number for number, _ in published), default=0)
+    for number, folder in published:
+        if number != newest or not folder.endswith(f"-{result_id[:8]}/"):
             continue
-        if json.loads(bytes(store.read(info.key)))["id"] == result_id:
-            return found[1]
+        if json.loads(bytes(store.read(folder + layout.MANIFEST)))["id"] == result_id:
+            return folder
     return None
 
 

@@ -319,3 +319,20 @@ def test_nothing_but_young_shards(desk: Desk) -> None:
     assert answer.status == 2
     answer.says("source.settle", "at least 10 min old", "run again later")
     assert not desk.dossier.exists()
+
+
+def test_latest_follows_when_the_inputs_become_those_of_an_earlier_result(tmp_path: Path) -> None:
+    """A sound shard comes, then is replaced by a bad one: what is in is what was in before it came."""
+    desk = Desk(tmp_path)
+    for number in range(SHARDS - 1):
+        desk.write(KEYS[number], good(number))
+    assert desk.run("--quiet").status == 0
+    desk.write(KEYS[-1], good(SHARDS - 1))
+    assert desk.run("--quiet").status == 0
+    assert desk.shards_in() == list(KEYS)
+    moments, values = part(SHARDS - 1)
+    desk.write(KEYS[-1], wide(moments, with_value(values, np.nan)))
+    assert desk.run("--quiet").status == 3
+    assert desk.shards_in() == list(KEYS[:-1])
+    desk.assert_holds(field((SHARDS - 1) * ROWS))
+    desk.assert_intact()
