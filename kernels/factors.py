@@ -6,6 +6,7 @@ accurate a mode is; the rounding floor is the one limit applied, because values 
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -14,10 +15,10 @@ import scipy.linalg
 from numpy.typing import NDArray
 
 from .addressed import STREAM_PRIMED, signs
+from .background import Removal, reduce
 from .blocks import Preparation
 from .checks import require_between, require_block, require_shape
 from .comoments import Summary
-from .comoments import keep_mean as with_mean_kept
 
 Floats = NDArray[np.float64]
 
@@ -41,13 +42,15 @@ class Factors:
     row_map : float64 (k', k)
         Coefficients are ``row_map`` times X; with the identity probe it is ``U^T``.
     energy : float64 (m,)
-        Sum of squares of each channel, about the mean or about zero as asked for.
+        Sum of squares of each channel after the background was removed.
     energy_total : float
         Sum of ``energy``.
     floor : float
         Rounding floor of singular values.
     n : int
         Samples.
+    removal : Removal
+        What was taken off before: the mean, or nothing, and functions of time.
     """
 
     modes: Floats
@@ -57,9 +60,10 @@ class Factors:
     energy_total: float
     floor: float
     n: int
+    removal: Removal
 
 
-def finish(summary: Summary, *, keep_mean: bool = False) -> Factors:
+def finish(summary: Summary, *, keep_mean: bool = False, remove: Sequence[int] = ()) -> Factors:
     """Return all modes above the rounding floor.
 
     The row space of X is the row space of the result: with ``P`` an orthonormal basis of it, ``A P P^T`` is found from
@@ -70,6 +74,8 @@ def finish(summary: Summary, *, keep_mean: bool = False) -> Factors:
     summary : Summary
     keep_mean : bool
         Decompose about zero instead of about the mean.
+    remove : sequence of int
+        Functions of time to remove before, see ``background.reduce``.
 
     Returns
     -------
@@ -79,14 +85,27 @@ def finish(summary: Summary, *, keep_mean: bool = False) -> Factors:
     Raises
     ------
     ValueError
-        The summary holds no samples.
+        The summary holds no samples, or a function is not one of its.
     """
     require_between("summary.n", summary.n, 1)
-    floor = _floor(summary, keep_mean)
-    if keep_mean:
-        summary = with_mean_kept(summary)
-    finish_kind = _finish_identity if summary.shape.identity else _finish_probe
-    modes, values, row_map = finish_kind(summary)
+    return finish_reduced(summary, *reduce(summary, keep_mean=keep_mean, rows=remove))
+
+
+def finish_reduced(summary: Summary, reduced: Summary, removal: Removal) -> Factors:
+    """Return what ``finish`` does, from a summary that ``background.reduce`` was applied to.
+
+    Parameters
+    ----------
+    summary : Summary
+        As added up: it tells how much rounding there is.
+    reduced, removal
+        Of the same samples.
+    """
+    floor = rounding_floor(summary.energy, summary.mean, summary.n, removal.keep_mean)
+    if reduced.shape.identity:
+        modes, values, row_map = _finish_identity(reduced)
+    else:
+        modes, values, row_map = _finish_probe(summary, reduced)
     order = np.argsort(-values, kind="stable")
     order = order[values[order] > floor]
     modes, row_map = orient(modes[:, order], row_map[order])
@@ -94,10 +113,11 @@ def finish(summary: Summary, *, keep_mean: bool = False) -> Factors:
         modes=modes,
         values=values[order],
         row_map=row_map,
-        energy=summary.energy.copy(),
-        energy_total=float(summary.energy.sum()),
+        energy=reduced.energy.copy(),
+        energy_total=float(reduced.energy.sum()),
         floor=floor,
         n=summary.n,
+        removal=removal,
     )
 
 
@@ -120,13 +140,7 @@ def orient(modes: Floats, row_map: Floats) -> tuple[Floats, Floats]:
 
 
 def coefficients(
-    factors: Factors,
-    rank: int,
-    x: NDArray[Any],
-    centre: Floats,
-    right_mean_x: Floats,
-    *,
-    keep_mean: bool = False,
+    factors: Factors, rank: int, x: NDArray[Any], centre: Floats, background: Floats | None = None
 ) -> Floats:
     """Return the coefficients of one stored block.
 
@@ -139,33 +153,27 @@ def coefficients(
         Stored X of the block.
     centre : float64 (k,)
         Upsilon times the mean of the block.
-    right_mean_x : float64 (k,)
-        Upsilon times the mean of everything: ``summary.right_mean[shape.x]``.
-    keep_mean : bool
-        Coefficients about zero instead of about the mean; ``factors`` must have been finished so too.
+    background : float64 (p', n), optional
+        The functions that were removed, at the block's samples; needed if any were.
 
     Returns
     -------
     c : float64 (rank, n)
+        ``row_map (X + centre - right_mean) - row_map right_weights (G - mean of G)``.
     """
     require_between("rank", rank, 0, factors.values.size)
-    require_block("x", x, factors.row_map.shape[1])
-    require_shape("centre", centre, (x.shape[0],))
-    offset = centre if keep_mean else centre - right_mean_x
-    rows = factors.row_map[:rank]
+    k = factors.row_map.shape[1]
+    require_block("x", x, k)
+    require_shape("centre", centre, (k,))
+    rows, removal = factors.row_map[:rank], factors.removal
     product: Floats = rows @ x.astype(np.float64, copy=False)
-    product += (rows @ offset)[:, np.newaxis]
+    product += (rows @ (centre - removal.right_mean[:k]))[:, np.newaxis]
+    _take_background(product, rows @ removal.right_weights[:k], factors, background)
     return product
 
 
 def direct_coefficients(
-    factors: Factors,
-    rank: int,
-    raw: NDArray[Any],
-    preparation: Preparation,
-    mean: Floats,
-    *,
-    keep_mean: bool = False,
+    factors: Factors, rank: int, raw: NDArray[Any], preparation: Preparation, background: Floats | None = None
 ) -> Floats:
     """Return the coefficients of a raw block that is read again, as with the identity probe.
 
@@ -176,21 +184,30 @@ def direct_coefficients(
         Leading modes wanted, at most as many as there are.
     raw : real (m, n)
     preparation : Preparation
-    mean : float64 (m,)
-        ``summary.mean``; not subtracted with ``keep_mean``.
+    background : float64 (p', n), optional
+        The functions that were removed, at the block's samples; needed if any were.
 
     Returns
     -------
     c : float64 (rank, n)
-        ``U^T A``.
+        ``U^T A``, of what is left of A.
     """
     require_between("rank", rank, 0, factors.values.size)
-    require_shape("mean", mean, (factors.modes.shape[0],))
     block = preparation.prepare(raw)
-    if not keep_mean:
-        block -= mean[:, np.newaxis]
-    product: Floats = factors.modes[:, :rank].T @ block
+    block -= factors.removal.mean[:, np.newaxis]
+    rows = factors.modes[:, :rank].T
+    product: Floats = rows @ block
+    _take_background(product, rows @ factors.removal.weights, factors, background)
     return product
+
+
+def _take_background(product: Floats, weights: Floats, factors: Factors, background: Floats | None) -> None:
+    if not factors.removal.rows:
+        return
+    if background is None:
+        raise ValueError("background: must be given where functions were removed; got none")
+    require_shape("background", background, (len(factors.removal.rows), product.shape[1]))
+    product -= weights @ (background - factors.removal.about[:, np.newaxis])
 
 
 def captured_by_channel(factors: Factors, rank: int) -> Floats:
@@ -250,13 +267,22 @@ def _fresh_rows(k: int, rank: int) -> int:
     return max(14, rank, -(-k // 3))
 
 
-def _floor(summary: Summary, keep_mean: bool) -> float:
-    mean_square = float(summary.mean @ summary.mean)
-    energy = float(summary.energy.sum())
-    if keep_mean:
-        energy += summary.n * mean_square
+def rounding_floor(energy: Floats, mean: Floats, n: int, keep_mean: bool) -> float:
+    """Return the singular value under which rounding rules.
+
+    Parameters
+    ----------
+    energy, mean : float64 (m,)
+        Centred sum of squares and mean of each channel, before any function was removed.
+    n : int
+        Samples.
+    keep_mean : bool
+        The energy of the mean is decomposed too.
+    """
+    mean_square = float(mean @ mean)
+    total = float(energy.sum()) + (n * mean_square if keep_mean else 0.0)
     # The mean of equal values is off by up to 2.9 eps of them (measured, 1 to 40 channels): energy that is none.
-    return float(np.sqrt(FLOOR_ULPS * EPS * energy + (FLOOR_ULPS * EPS) ** 2 * summary.n * mean_square))
+    return float(np.sqrt(FLOOR_ULPS * EPS * total + (FLOOR_ULPS * EPS) ** 2 * n * mean_square))
 
 
 def _finish_identity(summary: Summary) -> tuple[Floats, Floats, Floats]:
@@ -265,18 +291,25 @@ def _finish_identity(summary: Summary) -> tuple[Floats, Floats, Floats]:
     return modes, np.sqrt(np.maximum(squares, 0)), modes.T.copy()
 
 
-def _finish_probe(summary: Summary) -> tuple[Floats, Floats, Floats]:
+def _finish_probe(summary: Summary, reduced: Summary) -> tuple[Floats, Floats, Floats]:
     x = summary.shape.x
-    to_basis = _row_space(summary.inner[x, x])
-    modes, values, v1t = scipy.linalg.svd(summary.outer[:, x] @ to_basis, full_matrices=False)
+    to_basis = _row_space(np.diagonal(summary.inner)[x], reduced.inner[x, x], _rounding_of_rows(summary, reduced))
+    modes, values, v1t = scipy.linalg.svd(reduced.outer[:, x] @ to_basis, full_matrices=False)
     return modes, values, (values[:, np.newaxis] * v1t) @ to_basis.T
 
 
-def _row_space(c: Floats) -> Floats:
-    """Return ``d Q L^{-1/2}`` (k, l): right factor that makes the rows of X orthonormal, zero rows left out."""
-    d = _inverse_root_diagonal(c)
+def _rounding_of_rows(summary: Summary, reduced: Summary) -> float:
+    """Return the least eigenvalue of the scaled C that counts: what is removed leaves its rounding behind."""
+    before, after = float(summary.energy.sum()), float(reduced.energy.sum())
+    return max(ROW_SPACE_FLOOR, DIRECTION_ULPS * EPS * before / after) if after > 0 else 1.0
+
+
+def _row_space(before: Floats, c: Floats, least: float) -> Floats:
+    """Return ``d Q L^{-1/2}`` (k, l): right factor that makes the rows of X orthonormal, dead rows left out."""
+    live = np.diagonal(c) > DIRECTION_ULPS * EPS * before
+    d = np.where(live, _inverse_root_diagonal(c), 0.0)
     eigenvalues, q = scipy.linalg.eigh(d[:, np.newaxis] * c * d)
-    strong = eigenvalues > ROW_SPACE_FLOOR * max(float(eigenvalues[-1]), 0.0)
+    strong = eigenvalues > least * max(float(eigenvalues[-1]), 0.0)
     basis: Floats = d[:, np.newaxis] * q[:, strong] / np.sqrt(eigenvalues[strong])
     return basis
 

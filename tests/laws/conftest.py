@@ -24,13 +24,17 @@ class Folded:
     probe: Probe
     keys: np.ndarray
 
-    def coefficients(self, made: factors.Factors, rank: int, *, keep_mean: bool = False) -> np.ndarray:
-        centre = self.summary.right_mean[self.summary.shape.x]
-        parts = [
-            factors.coefficients(made, rank, block.x, block.centre, centre, keep_mean=keep_mean)
-            for block in self.blocks
-            if block is not None
-        ]
+    def coefficients(
+        self, made: factors.Factors, rank: int, background: np.ndarray | None = None
+    ) -> np.ndarray:
+        """Return the coefficients of all samples; ``background`` (p', n) holds the functions that were removed."""
+        parts, start = [], 0
+        for block in self.blocks:
+            if block is not None:
+                place = slice(start, start + block.x.shape[1])
+                known = None if background is None else background[:, place]
+                parts.append(factors.coefficients(made, rank, block.x, block.centre, known))
+                start = place.stop
         return np.concatenate(parts, axis=1)
 
 

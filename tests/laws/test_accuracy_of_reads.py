@@ -16,7 +16,7 @@ RANK, WIDTH = 10, 42
 def excess(matrix: np.ndarray, best: float, folded: Any, *, keep_mean: bool = False) -> float:
     """Return |A - A_hat_r| / |A - A_r| - 1."""
     made = factors.finish(folded.summary, keep_mean=keep_mean)
-    rebuilt = made.modes[:, :RANK] @ folded.coefficients(made, RANK, keep_mean=keep_mean)
+    rebuilt = made.modes[:, :RANK] @ folded.coefficients(made, RANK)
     return float(np.linalg.norm(matrix - rebuilt) / best - 1)
 
 

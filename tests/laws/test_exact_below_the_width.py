@@ -43,11 +43,10 @@ def test_modes_values_and_coefficients(
     assert count == rank + (1 if keep and offset else 0)
     np.testing.assert_allclose(made.values, truth[:count], rtol=1e-9)
     np.testing.assert_allclose(made.modes.T @ made.modes, np.eye(count), atol=1e-9)
-    mean = folded.summary.mean
     if identity:
-        got = factors.direct_coefficients(made, count, matrix, Preparation.unit(40), mean, keep_mean=keep)
+        got = factors.direct_coefficients(made, count, matrix, Preparation.unit(40))
     else:
-        got = folded.coefficients(made, count, keep_mean=keep)
+        got = folded.coefficients(made, count)
     # Rounding of products reaches singular values near sqrt(eps) of the first, never the large ones.
     assert np.linalg.norm(target - made.modes @ got) < 1e-8 * np.linalg.norm(target)
     np.testing.assert_allclose(got @ got.T, np.diag(made.values**2), atol=1e-8 * truth[0] ** 2)
@@ -138,6 +137,6 @@ def test_an_empty_summary_and_too_high_a_rank_are_refused(lab: Any) -> None:
     made = factors.finish(folded.summary)
     block = folded.blocks[0]
     with pytest.raises(ValueError, match="rank: must be between 0 and 2; got 3"):
-        factors.coefficients(made, 3, block.x, block.centre, block.centre)
+        factors.coefficients(made, 3, block.x, block.centre)
     with pytest.raises(ValueError, match=r"summary\.n: must be at least 1; got 0"):
         factors.finish(zero(folded.summary.shape))

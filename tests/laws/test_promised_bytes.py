@@ -80,7 +80,7 @@ def test_coefficients() -> None:
     arguments = ready(1000, 4096, 64, "float32", "C")
     block = fold_block(*arguments)
     made = factors.finish(arguments[0])
-    measured = peak_bytes(lambda: factors.coefficients(made, 10, block.x, block.centre, block.centre))
+    measured = peak_bytes(lambda: factors.coefficients(made, 10, block.x, block.centre))
     assert measured <= cost.coefficients_bytes(10, 64, 4096) <= 2 * measured
 
 
@@ -98,7 +98,7 @@ def test_direct_coefficients(order: Any) -> None:
     summary, raw, preparation = arguments[:3]
     fold_block(*arguments)
     made = factors.finish(summary)
-    measured = peak_bytes(lambda: factors.direct_coefficients(made, 10, raw, preparation, summary.mean))
+    measured = peak_bytes(lambda: factors.direct_coefficients(made, 10, raw, preparation))
     assert measured <= cost.direct_coefficients_bytes(10, 120, 4096) <= 2 * measured
 
 
