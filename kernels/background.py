@@ -1,8 +1,8 @@
 """Known functions of time, and their removal from a summary after the fact: the mean, a trend, declared cycles.
 
 Products with the functions G stand in every summary, so any subset of them can be taken off without reading anything:
-what is left is the summary of ``A (I - G^T T G)`` with ``T = pinv(G G^T)``. The same is done to the moments of a part
-(a leaf), about the background of the whole. Which functions are wanted is not decided here.
+what is left is the summary of ``A (I - G^T T G)`` with ``T = pinv(G G^T)``. The same is done to the stack of a part (a
+leaf), about the background of the whole. Which functions are wanted is not decided here.
 """
 
 from __future__ import annotations
@@ -20,7 +20,7 @@ from .comoments import keep_mean as with_mean_kept
 
 Floats = NDArray[np.float64]
 
-RANK_TOLERANCE = 1e-10  # least eigenvalue of the correlations of the functions that still counts as independent
+RANK_TOLERANCE = 1e-10  # a combination of functions, each of unit size, that varies less (squared) tells nothing
 
 
 @dataclass(frozen=True)
@@ -99,8 +99,8 @@ class Removal:
     ----------
     mean, right_mean : float64 (m,), (s,)
         Zeros where the mean is kept.
-    rows : tuple of int
-        Which functions were fitted and taken off.
+    rows, places : tuple of int, list of int (p',)
+        Which functions were fitted and taken off, and where they are in the stack.
     weights, right_weights : float64 (m, p'), (s, p')
         ``A G^T T`` and ``R G^T T`` for those functions.
     rank : int
@@ -114,6 +114,7 @@ class Removal:
     mean: Floats
     right_mean: Floats
     rows: tuple[int, ...]
+    places: list[int]
     weights: Floats
     right_weights: Floats
     rank: int
@@ -150,11 +151,12 @@ def reduce(summary: Summary, *, keep_mean: bool = False, rows: Sequence[int] = (
         require_between("rows", row, 0, shape.p - 1)
     if keep_mean:
         summary = with_mean_kept(summary)
-    means = (np.zeros(shape.m), np.zeros(shape.s)) if keep_mean else (summary.mean, summary.right_mean)
+    means = (np.zeros(shape.m), np.zeros(shape.s)) if keep_mean else (summary.mean.copy(), summary.right_mean.copy())
     if not rows:
-        return summary, Removal(*means, (), np.empty((shape.m, 0)), np.empty((shape.s, 0)), 0, np.empty(0), keep_mean)
+        nothing = np.empty((shape.m, 0)), np.empty((shape.s, 0))
+        return summary, Removal(*means, (), [], *nothing, 0, np.empty(0), keep_mean)
     places = _places(shape, rows)
-    inverse, rank = _pseudo_inverse(summary.inner[np.ix_(places, places)])
+    inverse, rank = _inverse_of(summary, places, keep_mean)
     weights, right = summary.outer[:, places] @ inverse, summary.inner[:, places] @ inverse
     left_products, right_products = summary.outer[:, places], summary.inner[places]
     inner = summary.inner - right @ right_products
@@ -164,35 +166,36 @@ def reduce(summary: Summary, *, keep_mean: bool = False, rows: Sequence[int] = (
         inner=(inner + inner.T) / 2,
         energy=np.maximum(summary.energy - np.einsum("ij,ij->i", weights, left_products), 0),
     )
-    return reduced, Removal(*means, tuple(rows), weights, right, rank, means[1][places], keep_mean)
+    return reduced, Removal(*means, tuple(rows), places, weights, right, rank, means[1][places], keep_mean)
 
 
-def apply(part: Summary, removal: Removal) -> Summary:
-    """Return the moments of a part of the samples about the background of all of them.
+def apply(n: int, right_mean: Floats, inner: Floats, removal: Removal) -> Floats:
+    """Return the products of the stack of a part of the samples, about the background of all of them.
 
-    The parts of a campaign add up to its reduced summary: plainly, no step between means is left.
+    The parts of a campaign add up to ``inner`` of its reduced summary: plainly, no step between means is left. The
+    products with the channels are not needed to judge modes by leaves, and are large.
 
     Parameters
     ----------
-    part : Summary
-        Moments about its own mean, as added up. Not changed.
+    n : int
+        Samples of the part.
+    right_mean, inner : float64 (s,), (s, s)
+        Of the part's summary, about its own mean. Not changed.
     removal : Removal
         Of the whole.
+
+    Returns
+    -------
+    inner : float64 (s, s)
     """
-    shape = part.shape
-    d, d_right = part.mean - removal.mean, part.right_mean - removal.right_mean
-    outer = part.outer + np.outer(part.n * d, d_right)
-    inner = part.inner + np.outer(part.n * d_right, d_right)
-    energy = part.energy + part.n * d * d
-    if removal.rows:
-        places = _places(shape, removal.rows)
-        left, right = outer[:, places].copy(), inner[:, places].copy()
-        gram = right[places]
-        weights, right_weights = removal.weights, removal.right_weights
-        energy += np.einsum("ij,ij->i", weights @ gram - 2 * left, weights)
-        outer += (weights @ gram - left) @ right_weights.T - weights @ right.T
-        inner += (right_weights @ gram - right) @ right_weights.T - right_weights @ right.T
-    return replace(part, outer=outer, inner=inner, energy=np.maximum(energy, 0))
+    d = right_mean - removal.right_mean
+    moved: Floats = inner + np.outer(n * d, d)
+    if not removal.rows:
+        return moved
+    weights = removal.right_weights
+    right = moved[:, removal.places].copy()
+    moved += (weights @ right[removal.places] - right) @ weights.T - weights @ right.T
+    return moved
 
 
 def term_energies(summary: Summary, groups: Sequence[Sequence[int]], *, keep_mean: bool = False) -> Floats:
@@ -218,7 +221,7 @@ def term_energies(summary: Summary, groups: Sequence[Sequence[int]], *, keep_mea
     for count in range(1, len(groups) + 1):
         places = _places(summary.shape, [row for group in groups[:count] for row in group])
         products = summary.outer[:, places]
-        inverse, _ = _pseudo_inverse(summary.inner[np.ix_(places, places)])
+        inverse, _ = _inverse_of(summary, places, keep_mean)
         taken.append(np.einsum("ij,ij->i", products @ inverse, products))
     return np.maximum(np.diff(np.array(taken), axis=0), 0)
 
@@ -227,13 +230,29 @@ def _places(shape: Shape, rows: Sequence[int]) -> list[int]:
     return [shape.g.start + row for row in rows]
 
 
-def _pseudo_inverse(gram: Floats) -> tuple[Floats, int]:
-    """Return the pseudo-inverse of the products of some functions, and their rank, each scaled to unit norm before."""
-    diagonal = np.diagonal(gram)
+def _inverse_of(summary: Summary, places: list[int], keep_mean: bool) -> tuple[Floats, int]:
+    gram = summary.inner[np.ix_(places, places)]
+    level = np.zeros(len(places)) if keep_mean else summary.right_mean[places]
+    return pseudo_inverse(gram, np.diagonal(gram) + summary.n * level**2)
+
+
+def pseudo_inverse(gram: Floats, sizes: Floats) -> tuple[Floats, int]:
+    """Return the pseudo-inverse of the products of some functions, and how many of them are independent.
+
+    A combination counts if it varies by more than ``RANK_TOLERANCE`` of what its functions measure about zero: less is
+    near rounding, and would take a random direction off the channels.
+
+    Parameters
+    ----------
+    gram : float64 (p', p')
+        Products about the mean.
+    sizes : float64 (p',)
+        Sums of squares about zero.
+    """
     scale = np.zeros(len(gram))
-    live = diagonal > 0
-    scale[live] = 1 / np.sqrt(diagonal[live])
+    live = sizes > 0
+    scale[live] = 1 / np.sqrt(sizes[live])
     values, q = scipy.linalg.eigh(scale[:, np.newaxis] * gram * scale)
-    strong = values > RANK_TOLERANCE * max(float(values[-1]), 0.0)
+    strong = values > RANK_TOLERANCE
     root = scale[:, np.newaxis] * q[:, strong] / np.sqrt(values[strong])
     return root @ root.T, int(strong.sum())

@@ -63,7 +63,7 @@ class Factors:
     removal: Removal
 
 
-def finish(summary: Summary, *, keep_mean: bool = False, remove: Sequence[int] = ()) -> Factors:
+def finish(summary: Summary, *, keep_mean: bool = False, rows: Sequence[int] = ()) -> Factors:
     """Return all modes above the rounding floor.
 
     The row space of X is the row space of the result: with ``P`` an orthonormal basis of it, ``A P P^T`` is found from
@@ -74,7 +74,7 @@ def finish(summary: Summary, *, keep_mean: bool = False, remove: Sequence[int] =
     summary : Summary
     keep_mean : bool
         Decompose about zero instead of about the mean.
-    remove : sequence of int
+    rows : sequence of int
         Functions of time to remove before, see ``background.reduce``.
 
     Returns
@@ -88,7 +88,7 @@ def finish(summary: Summary, *, keep_mean: bool = False, remove: Sequence[int] =
         The summary holds no samples, or a function is not one of its.
     """
     require_between("summary.n", summary.n, 1)
-    return finish_reduced(summary, *reduce(summary, keep_mean=keep_mean, rows=remove))
+    return finish_reduced(summary, *reduce(summary, keep_mean=keep_mean, rows=rows))
 
 
 def finish_reduced(summary: Summary, reduced: Summary, removal: Removal) -> Factors:
@@ -220,7 +220,7 @@ def captured_by_channel(factors: Factors, rank: int) -> Floats:
 
 def probe_width(width: int, rank: int) -> int:
     """Return the most rows ``next_probe`` can have after a read with ``width`` rows: those, the mean, random ones."""
-    return width + 1 + _fresh_rows(width, rank)
+    return width + 1 + fresh_rows(width, rank)
 
 
 def next_probe(summary: Summary, rank: int, seed: int, pass_number: int, keys: NDArray[np.integer]) -> Floats:
@@ -256,14 +256,15 @@ def next_probe(summary: Summary, rank: int, seed: int, pass_number: int, keys: N
     if shape.identity:
         raise ValueError(f"summary: must not come from the identity probe, which is exact; got {shape}")
     require_shape("keys", np.asarray(keys), (shape.m,))
-    random = signs(seed, STREAM_PRIMED + pass_number, keys, _fresh_rows(shape.k, rank)) / np.sqrt(shape.m)
+    random = signs(seed, STREAM_PRIMED + pass_number, keys, fresh_rows(shape.k, rank)) / np.sqrt(shape.m)
     length = float(np.linalg.norm(summary.mean))
     mean = summary.mean[np.newaxis] / length if length > 0 else np.empty((0, shape.m))
     rows = np.concatenate([_leading_directions(summary), mean, random])
     return rows.astype(np.float32).astype(np.float64)
 
 
-def _fresh_rows(k: int, rank: int) -> int:
+def fresh_rows(k: int, rank: int) -> int:
+    """Return how many random rows ``next_probe`` puts beside the directions that a probe of k rows has found."""
     return max(14, rank, -(-k // 3))
 
 

@@ -14,10 +14,10 @@ import numpy as np
 
 from shardfold.design import Design
 from shardfold.errors import PlanRefused
-from shardfold.kernels import cost
 from shardfold.kernels.whole import Shape, stored_dtype
 from shardfold.plan import TREE_BITS, Cell
 from shardfold.readers import group_peak_bytes, shard_peak_bytes
+from shardfold.summaries import bytes_of, finish_bytes, fold_bytes
 
 MIB = 1024 * 1024
 
@@ -97,14 +97,14 @@ def budget(design: Design, shape: Shape, cells: Sequence[Cell], rank: int, worke
     serial : bool
         Everything happens in the driver's process; no Ray.
     """
-    summary = cost.summary_bytes(shape)
+    summary = bytes_of(design, shape)
     phases = {
         "read": _read_phase(design, shape, cells, summary),
         "add up": {"interpreter": INTERPRETER_BYTES, "sums held at once": (TREE_BITS + 4) * summary},
         "coefficients": _coefficient_phase(design, shape, cells, rank),
     }
     describing = FOOTERS_AT_ONCE * max((_footer_bytes(design.layout, cell) for cell in cells), default=0)
-    driver = DRIVER_BYTES + max(describing, cost.finish_bytes(shape)) + sum(map(_records_bytes, cells))
+    driver = DRIVER_BYTES + max(describing, finish_bytes(design, shape)) + sum(map(_records_bytes, cells))
     return Budget(phases, driver, 0 if serial else OBJECT_STORE_BYTES, workers)
 
 
@@ -173,7 +173,7 @@ def _read_phase(design: Design, shape: Shape, cells: Sequence[Cell], summary: in
         "interpreter": INTERPRETER_BYTES,
         "row group": _largest_group(design.layout, cells),
         "block": shape.m * design.block_samples * itemsize,
-        "kernel": cost.fold_bytes(shape, design.block_samples, itemsize),
+        "kernel": fold_bytes(design, shape, design.block_samples, itemsize),
         "summary": 2 * summary,
         "probe": 0 if shape.identity else shape.k * shape.m * 12 + shape.q_theta * shape.m * 8,
         # Beside its own place, X is in the record that is written; when that is sent, only there and in the request.

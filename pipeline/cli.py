@@ -36,6 +36,10 @@ from shardfold.site import local_places
 F = TypeVar("F", bound=Callable[..., Any])
 
 REFUSED_STATUS = 3
+READING = (
+    "Accuracy: at most this far from the exact mode of these data (computation). Sampling: how far the exact mode may "
+    "be from that of the process, nine times in ten (length of the campaign). A group counts as one space."
+)
 
 
 def _common(function: F) -> F:
@@ -227,7 +231,7 @@ def _print_result(result: Result, quiet: bool) -> None:
     heading, *rows = mode_rows(result)
     table = Table(box=None, pad_edge=False, header_style="bold")
     for title in heading:
-        table.add_column(title, justify="left" if title == "peak at" else "right", no_wrap=True)
+        table.add_column(title, justify="left" if title == "verdict" else "right", no_wrap=True)
     for row in rows:
         table.add_row(*row)
     console = Console(highlight=False, soft_wrap=True, width=None if sys.stdout.isatty() else 120)
@@ -240,12 +244,14 @@ def _write_result(console: Console, table: Table, result: Result, quiet: bool) -
     q = result.manifest["quality"]
     console.print(
         f"{result.manifest['campaign']}: {q['channels']:,} channels, {q['samples']:,} samples, "
-        f"{len(result.manifest['shards']):,} shards, {result.manifest['reads']} read(s)",
+        f"{len(result.manifest['shards']):,} shards, {result.manifest['reads']} read(s); "
+        f"removed: {q['removed']}; tolerance {q['tolerance_deg']:g} deg",
         markup=False,
     )
     console.print(table)
     if not quiet:
-        console.print(CAUTION, markup=False, soft_wrap=False)
+        for text in (f"Next: {result.next_step}", READING, CAUTION):
+            console.print(text, markup=False, soft_wrap=False)
 
 
 def _print_closeness(rows: Any) -> None:
@@ -269,7 +275,8 @@ def _print_forecast(f: dict[str, Any]) -> None:
         f"{shards['not_listed_any_more']} kept though no longer listed",
         "summary": f["summary"],
         "leaf": f"{f['leaf']}; {f['cells']['all']:,} cells, {f['cells']['stored']:,} of them stored",
-        "reads": f"{reads['passes']} pass(es): {_mib(reads['bytes_first'])} now, {_mib(again)} again",
+        "reads": f"{reads['passes']} pass(es): {_mib(reads['bytes_first'])} now, {_mib(again)} again"
+        f"{'; more where the tolerance asks for it' if reads['more_if_needed'] else ''}",
         "work": f"{work['flops']:.3g} flops, about {work['seconds_about']:,} s with {work['workers']} worker(s) "
         f"({work['assumed_read_rate']} assumed; start-up apart)",
         "memory": f"{_mib(memory['worker_bytes'])} per worker (limit {_mib(memory['worker_limit_bytes'])}), "

@@ -15,18 +15,16 @@ from importlib.metadata import version
 from typing import Any
 
 from shardfold import layout
+from shardfold.assess import Assessment
 from shardfold.blas import core_type
 from shardfold.events import Published
 from shardfold.finish import finding_of, write_parts
 from shardfold.gather import moment
 from shardfold.ids import digest_value
-from shardfold.ingest import Intake, blocked_by_vanished
-from shardfold.kernels.whole import Shape, Summary
-from shardfold.plan import Cell
+from shardfold.ingest import Intake, Pass, blocked_by_vanished
 from shardfold.publish import manifest, put_all, quality, result_tables, seal, shards_digest
 from shardfold.site import Site
 from shardfold.store import Store
-from shardfold.sums import add_all
 
 PACKAGES = ("numpy", "scipy", "pyarrow", "ray", "s3fs")
 
@@ -41,31 +39,25 @@ class Conclusion:
     quality: dict[str, Any] = field(default_factory=dict)
 
 
-def conclude(
-    site: Site, intake: Intake, shape: Shape, cells: Sequence[Cell], probes: Sequence[str], started: datetime
-) -> Conclusion:
-    """Publish the result of what is in, unless it stands already.
+def conclude(site: Site, intake: Intake, done: Pass, judged: Assessment, started: datetime) -> Conclusion:
+    """Publish the result of what is in.
 
     Parameters
     ----------
     site, intake
         Where the run stands, and what it took in.
-    shape, cells
-        Of the last read.
-    probes : sequence of str
-        Digest of the frozen probe of each read.
+    done : Pass
+        The last read.
+    judged : Assessment
+        Its modes and what can be said of them.
     started : datetime
         When the run began.
     """
-    identity = _identity(site, intake, probes)
+    identity = _identity(site, intake, done.probes)
     result_id, store = digest_value(identity), site.dossier.store
     folder = f"{site.job.dossier.location.rstrip('/')}/"
-    standing = _standing(store, result_id)
-    if standing is not None:
-        intake.listen(Published(folder + standing, new=False))
-        return Conclusion(folder + standing, False, len(probes))
     prefix = layout.result_prefix(intake.ledger.number, result_id)
-    files, numbers = _write(site, intake, shape, cells, prefix)
+    files, numbers = _write(site, intake, done, judged, prefix)
     facts = identity | {
         "id": result_id,
         "ledger_number": intake.ledger.number,
@@ -77,25 +69,29 @@ def conclude(
     }
     new = seal(store, prefix, manifest(facts, files, _made(started, intake)))
     intake.listen(Published(folder + prefix, new=new))
-    return Conclusion(folder + prefix, new, len(probes), numbers)
+    return Conclusion(folder + prefix, new, done.read, numbers)
 
 
-def sum_of(site: Site, intake: Intake, read: int, shape: Shape, cells: Sequence[Cell]) -> Summary:
-    """Return the sum of all cells of a read."""
-    return add_all(site.dossier.store, site.workplace, intake.executor, intake.listen, read, shape, cells)
+def standing(site: Site, intake: Intake, probes: Sequence[str]) -> Conclusion | None:
+    """Return the result of what is in, if it stands already."""
+    found = _standing(site.dossier.store, digest_value(_identity(site, intake, probes)))
+    if found is None:
+        return None
+    place = f"{site.job.dossier.location.rstrip('/')}/{found}"
+    intake.listen(Published(place, new=False))
+    return Conclusion(place, False, len(probes))
 
 
 def _write(
-    site: Site, intake: Intake, shape: Shape, cells: Sequence[Cell], prefix: str
+    site: Site, intake: Intake, done: Pass, judged: Assessment, prefix: str
 ) -> tuple[dict[str, str], dict[str, Any]]:
     """Write coefficients and tables; return the digest of each file, and how much the modes hold."""
-    if shape.identity:
-        blocked_by_vanished(intake, cells)  # the coefficients are read again
-    read, modes = cells[0].read, site.job.modes
-    summary = sum_of(site, intake, read, shape, cells)
-    finding = finding_of(site.dossier, summary, modes.rank, "mean" not in modes.remove, intake.listen)
+    if done.shape.identity:
+        blocked_by_vanished(intake, done.cells)  # the coefficients are read again
+    finding = finding_of(site.dossier, judged)
+    rows = intake.rows_of(done.read)
     parts, spectrum = write_parts(
-        finding, shape, cells, intake.rows_of(read), prefix, site.workplace, intake.executor, intake.listen
+        finding, done.shape, done.cells, rows, prefix, site.workplace, intake.executor, intake.listen
     )
     files = put_all(site.dossier.store, prefix, result_tables(finding, spectrum.dominant_hz()))
     return files | {key.removeprefix(prefix): digest for key, digest in parts}, quality(finding)

@@ -16,7 +16,7 @@ import numpy as np
 
 from shardfold import layout
 from shardfold.channels import ChannelTable, default_table, read_table, to_arrow, units_conflict
-from shardfold.design import Design, compare, resolve
+from shardfold.design import FORMAT, Design, compare, resolve
 from shardfold.errors import InputError, RecordCorrupt
 from shardfold.ids import canonical_json, digest_bytes
 from shardfold.inventory import Inventory, choose_channels
@@ -46,9 +46,12 @@ def load(store: Store) -> Dossier | None:
     if store.head(layout.DESIGN) is None:
         return None
     try:
-        design = Design.from_record(json.loads(bytes(store.read(layout.DESIGN))))
+        record = json.loads(bytes(store.read(layout.DESIGN)))
+        if record["format"] != FORMAT:
+            raise _other_format(record["format"])
+        design = Design.from_record(record)
     except (ValueError, KeyError, TypeError) as error:
-        raise _corrupt(layout.DESIGN, f"a design of format 1 ({type(error).__name__}: {error})") from error
+        raise _corrupt(layout.DESIGN, f"a design of format {FORMAT} ({type(error).__name__}: {error})") from error
     data = bytes(store.read(layout.channels_key(1)))
     if digest_bytes(data) != design.table_digest:
         raise _corrupt(layout.channels_key(1), f"digest {design.table_digest}, got {digest_bytes(data)}")
@@ -174,6 +177,16 @@ def _check_units(job: Job, table: ChannelTable) -> None:
         rule="one unit, or a scale per channel",
         got=" and ".join(repr(unit) for unit in pair),
         remedy="design.scale: table with a scale column, one dossier per unit, or design.mixed_units: true",
+    )
+
+
+def _other_format(found: object) -> InputError:
+    return InputError(
+        "the dossier was written by another version of Shardfold",
+        where=layout.DESIGN,
+        rule=f"format {FORMAT}",
+        got=f"format {found}",
+        remedy="the version that wrote it, or a new dossier.location, which reads the campaign again",
     )
 
 

@@ -9,19 +9,21 @@ import numpy as np
 import numpy.typing as npt
 
 from shardfold import layout
+from shardfold.assess import Assessment
 from shardfold.blas import one_thread
 from shardfold.dossier import Dossier, npy_bytes
 from shardfold.errors import InputError
-from shardfold.events import Listener, Noted, StageDone, StageStarted, TaskDone
+from shardfold.events import Listener, StageDone, StageStarted, TaskDone
 from shardfold.executor import Executor
 from shardfold.kernels.addressed import name_keys
 from shardfold.kernels.blocks import Preparation
-from shardfold.kernels.factors import finish, next_probe
+from shardfold.kernels.factors import next_probe
 from shardfold.kernels.spectra import dominant_frequency
 from shardfold.kernels.whole import Shape, Summary
 from shardfold.plan import Cell, by_leaf
 from shardfold.publish import Finding
 from shardfold.refusals import changed_between_reads
+from shardfold.summaries import AnySummary
 from shardfold.tasks import CoefficientMap, Outcome, PartWritten, Refusal, Task, Workplace, WriteCoefficients
 
 Array = npt.NDArray[Any]
@@ -31,28 +33,9 @@ SHORTEST_SEGMENT = 64
 EVEN_STEP_TOLERANCE = 1e-3
 
 
-def finding_of(dossier: Dossier, summary: Summary, rank: int, keep_mean: bool, listen: Listener) -> Finding:
-    """Return the modes of a sum, ready to be published.
-
-    Raises
-    ------
-    InputError
-        If nothing varies: no mode lies above the rounding floor.
-    """
-    if rank > summary.n:
-        raise too_few_samples(rank, summary.n)
-    with one_thread():
-        factors = finish(summary, keep_mean=keep_mean)
-    if not len(factors.values):
-        raise _nothing_varies(summary, keep_mean)
-    if len(factors.values) < rank:
-        listen(
-            Noted(
-                f"{rank - len(factors.values)} of {rank} modes lie under the rounding floor "
-                f"({factors.floor:.3g}) and are left blank"
-            )
-        )
-    return Finding(dossier.table, _factor(dossier), summary, factors, rank, keep_mean, _unit(dossier))
+def finding_of(dossier: Dossier, judged: Assessment) -> Finding:
+    """Return what was found of a sum, ready to be published."""
+    return Finding(dossier.table, _factor(dossier), judged, dossier.design.terms, _unit(dossier))
 
 
 def too_few_samples(rank: int, samples: int) -> InputError:
@@ -66,8 +49,9 @@ def too_few_samples(rank: int, samples: int) -> InputError:
     )
 
 
-def write_probe(dossier: Dossier, summary: Summary, rank: int, read: int) -> None:
+def write_probe(dossier: Dossier, summary: AnySummary, rank: int, read: int) -> None:
     """Freeze the probe of the next read from the sum of the one before; one that exists wins."""
+    assert isinstance(summary, Summary), "a read with all channels kept is never followed by another"
     with one_thread():
         rows = next_probe(summary, rank, dossier.design.seed, read, name_keys(dossier.table.names))
     dossier.store.create(layout.probe_key(read), npy_bytes(rows.astype(np.float32)))
@@ -162,10 +146,16 @@ class Spectrum:
 
 def coefficient_map(finding: Finding, shape: Shape) -> CoefficientMap:
     """Return how X (or prepared raw data) becomes coefficients; rows under the floor are NaN."""
+    removal, held = finding.factors.removal, finding.factors.row_map[: finding.held]
+    if shape.identity:
+        centre, weights = removal.mean, removal.weights
+    else:
+        centre, weights = removal.right_mean[shape.x], removal.right_weights[shape.x]
     rows = np.full((finding.rank, shape.k), np.nan)
-    rows[: finding.held] = finding.factors.row_map[: finding.held]
-    mean = finding.summary.mean if shape.identity else finding.summary.right_mean[shape.x]
-    return CoefficientMap(rows, np.zeros_like(mean) if finding.keep_mean else mean)
+    rows[: finding.held] = held
+    shares = np.zeros((finding.rank, weights.shape[1]))
+    shares[: finding.held] = held @ weights
+    return CoefficientMap(rows, centre, removal.rows, shares, removal.about)
 
 
 def _segment(rows_of: dict[int, int]) -> int:
@@ -183,15 +173,3 @@ def _unit(dossier: Dossier) -> str:
     units = {unit for unit in dossier.table.unit if unit}
     plain = dossier.design.scale == "none" and len(units) == 1 and bool(np.all(dossier.table.weight == 1))
     return units.pop() if plain else ""
-
-
-def _nothing_varies(summary: Summary, keep_mean: bool) -> InputError:
-    about = "zero" if keep_mean else "the mean of each channel"
-    got = "one sample only" if summary.n == 1 else f"{summary.n:,} samples; every channel is constant to rounding"
-    return InputError(
-        "there is nothing to decompose",
-        where="the campaign",
-        rule=f"values that vary about {about}",
-        got=got,
-        remedy="see that the right columns are read" + ("" if keep_mean else "; 'modes.remove: []' keeps the mean"),
-    )

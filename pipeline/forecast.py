@@ -11,11 +11,11 @@ import numpy as np
 
 from shardfold import budget, dossier, layout
 from shardfold.blas import core_type, one_thread
+from shardfold.design import Design, choose_summary, expected_rank
 from shardfold.errors import InputError
 from shardfold.events import Listener
 from shardfold.gather import moment
 from shardfold.job import Job
-from shardfold.kernels import cost
 from shardfold.kernels.whole import Shape, stored_dtype
 from shardfold.ledger import Entry
 from shardfold.plan import Cell, bytes_to_read, cut, tree
@@ -23,6 +23,7 @@ from shardfold.quantities import format_duration
 from shardfold.refusals import found_in, nothing_left, refusal_of
 from shardfold.run import check_rank, reads_of, shapes_of
 from shardfold.site import Site, look
+from shardfold.summaries import bytes_of, fold_flops
 from shardfold.sums import leaf_names
 
 FOOTERS_READ = 200
@@ -52,16 +53,17 @@ def forecast(job: Job, workers: int, listen: Listener) -> Forecast:
     """
     site = look(job, listen, sample=FOOTERS_READ)
     design = site.dossier.design
-    shape = design.shape(1, design.width)
+    shape = design.shape(design.width)
     facts = dossier.probe_facts(site.dossier.store, design, 1) if site.exists else None
     cutting = cut(list(site.shards.values()), design, 1, shape, facts[1] if facts else "")
     cells = cutting.cells
     stored = _stored(site) if site.exists else set()
     reads = reads_of(job, design)
     serial = job.engine.workers == "serial"
-    shapes = shapes_of(design, job.modes.rank, reads)
+    shapes = shapes_of(design, expected_rank(job.modes.rank), reads)
+    modes = design.most_modes(job.modes.rank)
     memory = max(
-        (budget.budget(design, s, cells, job.modes.rank, 1 if serial else workers, serial) for s in shapes),
+        (budget.budget(design, s, cells, modes, 1 if serial else workers, serial) for s in shapes),
         key=lambda plan: plan.worker_bytes,
     )
     # Where footers were sampled, amounts are scaled up to all shards; spans and memory are those of the sample.
@@ -73,13 +75,13 @@ def forecast(job: Job, workers: int, listen: Listener) -> Forecast:
         "samples": round(scale * sum(shard.rows for key, shard in site.shards.items() if key not in refused)),
         "channels": design.channels,
         "span": _span(site),
-        "summary": _summary(design.identity, design.width, design.channels),
+        "summary": _summary(job, design),
         "leaf": format_duration(design.leaf_ns) if design.timed else f"{1 << design.leaf_bits} by hash of the name",
         "cells": {"all": round(scale * len(cells)), "stored": sum(cell.name in stored for cell in cells)},
-        "reads": _reads(cells, stored, reads, design.identity, scale),
-        "work": _work(shapes, cells, stored, workers, scale),
+        "reads": _reads(cells, stored, reads, job, design, scale),
+        "work": _work(design, shapes, cells, stored, workers, scale),
         "memory": _memory(memory, job.engine.memory_bytes),
-        "storage_bytes": round(scale * _storage(shapes, cells, design.kernel)),
+        "storage_bytes": round(scale * _storage(design, shapes, cells)),
         "dossier": "exists" if site.exists else "would be created",
         "blas": core_type(),
     }
@@ -122,10 +124,13 @@ def _span(site: Site) -> list[str] | None:
     return [moment(min(firsts)), moment(max(lasts))]
 
 
-def _summary(identity: bool, width: int, channels: int) -> str:
-    if identity:
-        return f"whole, identity probe: {channels} channels are few enough; coefficients are read again"
-    return f"whole, probe of {width} rows: every shard holds all channels of its samples"
+def _summary(job: Job, design: Design) -> str:
+    """Return which summary is kept, and why."""
+    kind = "exact" if design.exact else "whole"
+    if not design.identity:
+        kind += f", probe of {design.width} rows"
+    chosen, why = choose_summary(job, design.channels, design.identity)
+    return f"{kind}: {why if chosen == design.summary else 'what the dossier was created with'}"
 
 
 def _scale(site: Site) -> float:
@@ -135,23 +140,24 @@ def _scale(site: Site) -> float:
 
 
 def _reads(
-    cells: Sequence[Cell], stored: set[str], reads: int, identity: bool, scale: float
+    cells: Sequence[Cell], stored: set[str], reads: int, job: Job, design: Design, scale: float
 ) -> dict[str, Any]:
     once = scale * sum(cell.stored_bytes for cell in cells)
     return {
         "passes": reads,
         "bytes_first": round(scale * bytes_to_read(cells, stored)),
         "bytes_further": round(once * (reads - 1)),
-        "bytes_for_coefficients": round(once) if identity else 0,
+        "bytes_for_coefficients": round(once) if design.identity else 0,
+        "more_if_needed": job.modes.reads == "auto" and not design.identity,
     }
 
 
 def _work(
-    shapes: Sequence[Shape], cells: Sequence[Cell], stored: set[str], workers: int, scale: float
+    design: Design, shapes: Sequence[Shape], cells: Sequence[Cell], stored: set[str], workers: int, scale: float
 ) -> dict[str, Any]:
     fresh = [cell for cell in cells if cell.name not in stored]
     rows, data = sum(cell.rows for cell in fresh), sum(cell.stored_bytes for cell in fresh)
-    flops = scale * sum(cost.fold_flops(shape, rows) for shape in shapes)
+    flops = scale * sum(fold_flops(design, shape, rows) for shape in shapes)
     seconds = (flops / _flops_per_second() + scale * data * len(shapes) / ASSUMED_BYTES_PER_SECOND) / workers
     return {
         "flops": flops,
@@ -172,13 +178,13 @@ def _memory(memory: budget.Budget, limit: int) -> dict[str, Any]:
     }
 
 
-def _storage(shapes: Sequence[Shape], cells: Sequence[Cell], kernel: int) -> int:
-    sums = sum(len(nodes) for nodes in tree(1, leaf_names(cells), kernel)) if cells else 0
+def _storage(design: Design, shapes: Sequence[Shape], cells: Sequence[Cell]) -> int:
+    sums = sum(len(nodes) for nodes in tree(1, leaf_names(cells), design.kernel)) if cells else 0
     total = 0
     for shape in shapes:
         per_sample = 0 if shape.identity else shape.k
         x_bytes = sum(cell.rows * per_sample * stored_dtype(cell.dtype).itemsize for cell in cells)
-        total += (len(cells) + sums) * cost.summary_bytes(shape) + x_bytes
+        total += (len(cells) + sums) * bytes_of(design, shape) + x_bytes
     return total
 
 

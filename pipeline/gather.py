@@ -18,9 +18,11 @@ from shardfold.design import Design
 from shardfold.errors import ShardRefused
 from shardfold.ids import Shard
 from shardfold.kernels.addressed import STREAM_SAMPLE, name_keys, normals, shard_row_keys
+from shardfold.kernels.background import functions
 from shardfold.kernels.blocks import Preparation, find_first_bad
-from shardfold.kernels.whole import Probe, Shape, Summary, fold_block, stored_dtype, to_arrays, zero
+from shardfold.kernels.whole import Probe, Shape, stored_dtype
 from shardfold.readers import Batch
+from shardfold.summaries import AnySummary, fold, to_arrays, zero
 
 KEPT_SAMPLES = 2
 KEPT_CHANNELS = 16
@@ -87,7 +89,7 @@ class CellGather:
         self._design, self._shape, self._preparation = design, shape, preparation
         self._probe, self._channels = probe, channels
         self._cutter = BlockCutter(shape.m, design.block_samples, dtype)
-        self.summary: Summary = zero(shape)
+        self.summary: AnySummary = zero(design, shape)
         # Memory that is never written to is never held, so too many rows cost nothing.
         self._times = np.empty(rows, np.int64)
         self._x = np.empty((0 if shape.identity else rows, shape.k), stored_dtype(dtype))
@@ -148,9 +150,9 @@ class CellGather:
 
     def _fold(self, block: Block) -> None:
         first, n = self.summary.n, len(block.times)
-        checks = self._sample_checks(block)
+        checks, background = self._sample_checks(block), functions(self._design.terms, block.times)
         try:
-            made = fold_block(self.summary, block.raw, self._preparation, self._probe, checks, np.empty((0, n)))
+            made = fold(self.summary, block.raw, self._preparation, self._probe, checks, background)
         except FloatingPointError as error:
             raise self._not_finite(block) from error
         if made is not None:

@@ -109,6 +109,16 @@ class Intake:
         return entry is not None and entry.state == "in"
 
 
+@dataclass(frozen=True)
+class Pass:
+    """A read that is done: its number, the shape of its summaries, its cells, and the probes up to its own."""
+
+    read: int
+    shape: Shape
+    cells: tuple[Cell, ...]
+    probes: tuple[str, ...]
+
+
 def bring_in(intake: Intake, read: int, shape: Shape, probe_digest: str) -> tuple[Cell, ...]:
     """Carry out one read and return its cells, all of them stored and committed.
 

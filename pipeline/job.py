@@ -18,9 +18,11 @@ from shardfold.job_faults import Fault
 from shardfold.job_keys import keys_of
 from shardfold.job_rules import MATCH_OF_LAYOUT, broken_relations
 from shardfold.job_settings import (
+    AngleRank,
     Background,
     Channels,
     Design,
+    EnergyRank,
     Engine,
     Job,
     JobKeys,
@@ -37,9 +39,11 @@ from shardfold.job_written import written_job
 from shardfold.yaml_lines import Entry
 
 __all__ = [
+    "AngleRank",
     "Background",
     "Channels",
     "Design",
+    "EnergyRank",
     "Engine",
     "Job",
     "Modes",
@@ -151,4 +155,5 @@ def _default_match(root: Entry) -> None:
 
 
 _KEYS = keys_of(JobKeys, hidden=TimeColumn)
-_SECTIONS = tuple(path for path, key in _KEYS.items() if key.below and path != ("source", "time"))
+_CHOICES = {("source", "time"), ("modes", "rank")}  # one of several kinds of value, some of which hold keys
+_SECTIONS = tuple(path for path, key in _KEYS.items() if key.below and path not in _CHOICES)

@@ -11,7 +11,7 @@ from pathlib import Path
 from typing import Any
 
 from shardfold import layout
-from shardfold.job_faults import Fault
+from shardfold.job_faults import Fault, one_of
 from shardfold.job_places import inside, is_local, parse_endpoint, pattern_regex, resolve
 from shardfold.quantities import parse_duration
 from shardfold.yaml_lines import Entry
@@ -19,6 +19,8 @@ from shardfold.yaml_lines import Entry
 MATCH_OF_LAYOUT = {"wide": "**/*.parquet", "vector": "**/*.parquet", "array": "**/*.npy"}
 
 _STORAGE_KEYS = ("endpoint", "region", "anonymous")
+_UNDECLARED = "must be declared in design.background to be removed"
+_FIXED = "which is fixed when the dossier is created"
 
 
 @dataclass(frozen=True)
@@ -32,8 +34,11 @@ class Written:
     def entry(self, key: str) -> Entry | None:
         """Return the entry of a key that is given and has no fault on, above or below it."""
         found = self.root.at(tuple(key.split(".")))
-        near = any(f == key or f.startswith(key + ".") or key.startswith(f + ".") for f in self.faulty)
-        return None if found is None or near else found
+        return None if found is None or not self.sound(key) else found
+
+    def sound(self, key: str) -> bool:
+        """Return whether a key, given or not, has no fault on, above or below it."""
+        return not any(f == key or f.startswith(key + ".") or key.startswith(f + ".") for f in self.faulty)
 
     def value(self, key: str) -> Any:
         """Return the raw value of a sound key, ``None`` for all others."""
@@ -54,6 +59,11 @@ class Written:
         """Return a location in its one form."""
         written = self.value(key)
         return resolve(written, self.folder) if isinstance(written, str) else None
+
+    def items(self, key: str) -> list[Entry]:
+        """Return the items of a sound list, none of all others."""
+        found = self.entry(key)
+        return [] if found is None else found.items or []
 
     def fault(self, key: str, rule: str, remedy: str = "") -> Fault:
         """Return a fault on a key, or on the section it is missing from."""
@@ -125,6 +135,48 @@ def _scale_of_table(written: Written) -> Iterator[Fault]:
     if written.value("design.scale") == "table" and not written.given("source.channels.table"):
         remedy = "add source.channels.table, or write scale: none"
         yield written.fault("design.scale", "must be none without a channel table", remedy)
+
+
+def _background_of_time(written: Written) -> Iterator[Fault]:
+    if written.value("source.time") != "none":
+        return
+    for name, empty, reason in (("trend", "false", "is no trend"), ("cycles", "[]", "are no cycles")):
+        if written.value(f"design.background.{name}"):
+            rule = f"must be {empty} with time: none: without times there {reason}"
+            yield written.fault(f"design.background.{name}", rule, "leave it out")
+
+
+def _removed_terms_are_declared(written: Written) -> Iterator[Fault]:
+    for item in written.items("modes.remove"):
+        term = str(item.value)
+        if term == "mean":
+            continue
+        if written.value("source.time") == "none":
+            rule, remedy = "must be mean with time: none: without times there is nothing else to remove", "leave it out"
+        else:
+            rule, remedy = _undeclared_trend(written) if term == "trend" else _undeclared_cycle(written, term)
+        if rule:
+            yield Fault(item.spot, "modes.remove", rule, item.shown(), remedy)
+
+
+def _undeclared_trend(written: Written) -> tuple[str, str]:
+    """Return rule and remedy of a trend that is removed and not declared; nothing if all is well or told already."""
+    key = "design.background.trend"
+    if not written.sound(key) or written.value(key) is True:
+        return "", ""
+    return _UNDECLARED, f"add {key}: true, {_FIXED}, or leave it out"
+
+
+def _undeclared_cycle(written: Written, term: str) -> tuple[str, str]:
+    """Return the same of a cycle, or of all: ``cycles``."""
+    key = "design.background.cycles"
+    declared = {parse_duration(period): f'"{period}"' for period in written.value(key) or ()}
+    if not written.sound(key) or (declared and (term == "cycles" or parse_duration(term) in declared)):
+        return "", ""
+    if declared:
+        remedy = f"write one of them, or add it to {key}, {_FIXED}"
+        return f"must be a declared cycle, {one_of(declared.values())}", remedy
+    return _UNDECLARED, f'add {key}: ["{"12.42 h" if term == "cycles" else term}"], {_FIXED}, or leave it out'
 
 
 def _keys_of_location(written: Written) -> Iterator[Fault]:
@@ -226,6 +278,8 @@ _RULES: tuple[Callable[[Written], Iterator[Fault]], ...] = (
     _orient_of_layout,
     _leaf_of_time,
     _scale_of_table,
+    _background_of_time,
+    _removed_terms_are_declared,
     _keys_of_location,
     _dossier_can_be_written,
     _dossier_and_campaign_are_apart,

@@ -18,22 +18,29 @@ from pydantic import (
     Field,
     Tag,
     ValidationInfo,
+    field_validator,
 )
 
 from shardfold.job_places import parse_endpoint, resolve
 from shardfold.job_values import (
-    RANK,
+    CYCLES,
     READS,
+    REMOVED,
     SEED,
     WIDTH,
     WORKERS,
+    acute_angle,
     always_true,
     auto_or_duration,
+    background_term,
     core_type,
-    different_terms,
+    cycle_period,
+    energy_share,
     keys_pattern,
     one_line,
     positive_duration,
+    rank_keys,
+    rank_kind,
     ray_address,
     some_patterns,
     table_name,
@@ -54,6 +61,8 @@ Word = Annotated[str, AfterValidator(one_line)]
 Location = Annotated[str, AfterValidator(_resolved)]
 Patterns = tuple[Annotated[str, AfterValidator(one_line)], ...]
 Step = Annotated[int, BeforeValidator(positive_duration)]
+Angle = Annotated[float, BeforeValidator(acute_angle)]
+Term = Literal["mean", "trend", "cycles"] | int
 
 
 class Settings(BaseModel):
@@ -130,9 +139,22 @@ class Place(Settings):
 
 
 class Background(Settings):
-    """Known functions of time that are kept beside the sums, so that they can be removed after the fact."""
+    """Known functions of time that are kept beside the sums, so that they can be removed after the fact.
+
+    Attributes
+    ----------
+    cycles : tuple of int
+        Periods in nanoseconds, as declared: different, each at least 2.
+    """
 
     mean: Annotated[bool, BeforeValidator(always_true)] = True
+    trend: bool = False
+    cycles: Annotated[tuple[Annotated[int, BeforeValidator(cycle_period)], ...], BeforeValidator(CYCLES)] = ()
+
+    def in_order(self, terms: tuple[Term, ...]) -> tuple[Term, ...]:
+        """Return the declared ones of some terms in their one order: mean, trend, then each cycle as declared."""
+        named = {*terms, *(self.cycles if "cycles" in terms else ())}
+        return tuple(term for term in ("mean", "trend", *self.cycles) if term in named)
 
 
 class Design(Settings):
@@ -141,7 +163,7 @@ class Design(Settings):
     scale: Literal["none", "table"] = "none"
     gaps: Literal["refuse"] = "refuse"
     background: Background = Background()
-    summary: Literal["auto", "whole"] = "auto"
+    summary: Literal["auto", "whole", "exact"] = "auto"
     width: Annotated[Literal["auto"] | int, BeforeValidator(WIDTH)] = "auto"
     leaf: Annotated[Literal["auto"] | int, BeforeValidator(auto_or_duration)] = "auto"
     blas: Annotated[str, AfterValidator(core_type)] = "any"
@@ -149,12 +171,44 @@ class Design(Settings):
     mixed_units: bool = False
 
 
-class Modes(Settings):
-    """What is computed from the sums; may differ from result to result of one dossier."""
+class EnergyRank(Settings):
+    """As many modes as hold a share of the energy."""
 
-    rank: Annotated[int, BeforeValidator(RANK)] = 10
-    reads: Annotated[int, BeforeValidator(READS)] = 1
-    remove: Annotated[tuple[Literal["mean"], ...], AfterValidator(different_terms)] = ("mean",)
+    energy: Annotated[float, BeforeValidator(energy_share)]
+
+
+class AngleRank(Settings):
+    """As many modes as are right within an angle."""
+
+    angle_deg: Angle = Field(alias="angle")
+
+
+Rank = Annotated[
+    Annotated[int | Literal["noise_edge"], Tag("<number>")]
+    | Annotated[EnergyRank, Tag("<energy>")]
+    | Annotated[AngleRank, Tag("<angle>")],
+    Discriminator(rank_kind),
+]
+
+
+class Modes(Settings):
+    """What is computed from the sums; may differ from result to result of one dossier.
+
+    Attributes
+    ----------
+    remove : tuple
+        Background terms: ``"mean"``, ``"trend"``, and the period of each cycle in nanoseconds. In a job they have their
+        one order (`Background.in_order`), and ``"cycles"`` has become the cycles that are declared.
+    tolerance_deg : float
+        The angle within which a mode counts as resolved.
+    """
+
+    rank: Annotated[Rank, BeforeValidator(rank_keys)] = 10
+    reads: Annotated[Literal["auto"] | int, BeforeValidator(READS)] = 1
+    remove: Annotated[tuple[Annotated[Term, BeforeValidator(background_term)], ...], BeforeValidator(REMOVED)] = (
+        "mean",
+    )
+    tolerance_deg: Angle = Field(default=5.0, alias="tolerance")
 
 
 class Engine(Settings):
@@ -174,6 +228,15 @@ class JobKeys(Settings):
     design: Design = Design()
     modes: Modes = Modes()
     engine: Engine = Engine()
+
+    @field_validator("modes")
+    @classmethod
+    def _in_order(cls, modes: Modes, info: ValidationInfo) -> Modes:
+        """Give removed terms their one form. It leaves undeclared ones out, which the relations of keys refuse."""
+        design = info.data.get("design")
+        if design is None:  # faulty, and told
+            return modes
+        return modes.model_copy(update={"remove": design.background.in_order(modes.remove)})
 
 
 class Job(JobKeys):

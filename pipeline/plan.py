@@ -16,9 +16,9 @@ from shardfold.design import LARGE_PIECE_RATIO, Design
 from shardfold.errors import ShardRefused
 from shardfold.ids import Shard, digest_value
 from shardfold.kernels.addressed import name_keys
-from shardfold.kernels.cost import summary_bytes
 from shardfold.kernels.whole import Shape
 from shardfold.quantities import format_duration
+from shardfold.summaries import bytes_of
 
 TREE_BITS = 3
 """Each stored sum covers an aligned run of 2**3 children, summed in one task; the bits are those of the full tree."""
@@ -115,7 +115,7 @@ def cut(shards: Sequence[Shard], design: Design, read: int, shape: Shape, probe_
                 pieces_of[leaf].append(piece)
         except ShardRefused as error:
             refused.append(error)
-    large = LARGE_PIECE_RATIO * summary_bytes(shape)
+    large = LARGE_PIECE_RATIO * bytes_of(design, shape)
     cells = []
     for leaf, pieces in sorted(pieces_of.items()):
         alone = [(piece,) for piece in pieces if piece.decoded_bytes >= large]

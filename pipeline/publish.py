@@ -14,12 +14,15 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from shardfold import layout
+from shardfold import advice, layout
+from shardfold.assess import Assessment, padded
+from shardfold.background_columns import background_columns
 from shardfold.channels import ChannelTable
 from shardfold.ids import canonical_json, digest_bytes
+from shardfold.kernels.background import Removal, Terms
 from shardfold.kernels.factors import Factors, captured_by_channel
-from shardfold.kernels.whole import Summary
 from shardfold.store import Created, Store
+from shardfold.summaries import AnySummary
 from shardfold.tables import Column, mode_names, to_parquet
 
 Array = npt.NDArray[Any]
@@ -32,28 +35,46 @@ CAUTION = (
 
 @dataclass(frozen=True)
 class Finding:
-    """What is published: the factors, the summary they came from, and who the channels are.
+    """What is published: what was found of a sum, and who the channels are.
 
     ``rank`` modes are written; those under the rounding floor are blank.
     """
 
     table: ChannelTable
     factor: Array
-    summary: Summary
-    factors: Factors
-    rank: int
-    keep_mean: bool
+    judged: Assessment
+    terms: Terms
     unit: str
 
     @property
+    def summary(self) -> AnySummary:
+        """Return the sum as it was added up."""
+        return self.judged.summary
+
+    @property
+    def factors(self) -> Factors:
+        """Return all computed modes."""
+        return self.judged.factors
+
+    @property
+    def removal(self) -> Removal:
+        """Return what was taken off before."""
+        return self.judged.factors.removal
+
+    @property
+    def rank(self) -> int:
+        """Return the number of modes that are written."""
+        return self.judged.rank
+
+    @property
     def held(self) -> int:
-        """Return how many of the asked modes lie above the floor."""
+        """Return how many of them lie above the floor."""
         return min(self.rank, len(self.factors.values))
 
     @property
     def values(self) -> Array:
         """Return the singular values (rank,), NaN under the floor."""
-        return _padded(self.factors.values[: self.held], self.rank)
+        return padded(self.factors.values[: self.held], self.rank)
 
     @property
     def patterns(self) -> Array:
@@ -90,8 +111,8 @@ def modes_table(finding: Finding) -> bytes:
 
 
 def mode_table(finding: Finding, dominant_hz: Array) -> bytes:
-    """Return one row per mode: value, size, share of energy, where and how fast it moves most."""
-    n, unit = max(1, finding.summary.n), finding.unit
+    """Return one row per mode: value, size, share of energy, how far it can be relied on, where it moves most."""
+    n, unit, judged = max(1, finding.summary.n), finding.unit, finding.judged
     values, patterns = finding.values, finding.patterns
     share = values**2 / finding.factors.energy_total
     peaks = [int(np.argmax(np.abs(p))) if np.isfinite(p).all() else -1 for p in patterns.T]
@@ -100,13 +121,30 @@ def mode_table(finding: Finding, dominant_hz: Array) -> bytes:
         "mode": Column(np.arange(1, finding.rank + 1), "", "number, by falling singular value"),
         "singular_value": Column(values, unit, "empty where it lies under the rounding floor"),
         "rms": Column(values / np.sqrt(n), unit, "root mean square of the coefficient over the samples"),
-        "energy_fraction": Column(share, "", "share of the energy left after the background was removed"),
+        "energy_fraction": Column(share, "", "share of the energy left after the background was removed; exact"),
         "energy_cumulative": Column(np.cumsum(share), "", "share of this and all stronger modes"),
+        **_accuracy_columns(judged),
         "peak_channel": Column([finding.table.names[c] if c >= 0 else None for c in peaks], "", "where it is largest"),
         "rms_at_peak": Column(at_peak * values / np.sqrt(n), "the channel's", "root mean square at the peak channel"),
         "dominant_hz": Column(dominant_hz, "Hz", "peak of the coefficient's spectrum; empty if sampling is uneven"),
     }
-    return to_parquet(columns, {"caution": CAUTION})
+    return to_parquet(columns, {"caution": CAUTION, "tolerance_deg": repr(judged.tolerance_deg)})
+
+
+def _accuracy_columns(judged: Assessment) -> dict[str, Column]:
+    degrees, bounds, told = judged.degrees, judged.bounds, judged.sampling
+    whom = "the mode, or the space of its group"
+    abouts: dict[str, tuple[Any, str, str]] = {
+        "angle_bound_deg": (degrees(bounds.sine), "deg", f"{whom} is this close to the exact one of these data"),
+        "mac_at_least": (advice.mac(judged), "", "least modal assurance with the exact mode of these data, if alone"),
+        "coefficient_angle_bound_deg": (degrees(bounds.coefficient_sine), "deg", f"the same of coefficients of {whom}"),
+        "sampling_angle_deg": (degrees(told.sine), "deg", f"{whom} is this close to the process, 9 times in 10"),
+        "north_angle_deg": (degrees(told.north), "deg", "root mean square, by North's rule with the effective samples"),
+        "group": (advice.group_names(judged), "", "close modes, of which only the space of all means anything"),
+        "verdict": (advice.verdict_words(judged), "", "against the tolerance of the result"),
+        "remedy": (advice.remedy_words(judged), "", "what would help, and by how much about"),
+    }
+    return {name: Column(*about) for name, about in abouts.items()}
 
 
 def channel_summary(finding: Finding) -> bytes:
@@ -132,13 +170,8 @@ def channel_summary(finding: Finding) -> bytes:
 
 
 def background_table(finding: Finding) -> bytes:
-    """Return one row per channel: each removed background term and the energy it held."""
-    summary = finding.summary
-    columns = {"channel": Column(list(finding.table.names), "", "channel name")}
-    if not finding.keep_mean:
-        columns["mean"] = Column(summary.mean / finding.factor, "the channel's", "removed mean")
-        columns["mean_energy"] = Column(summary.n * summary.mean**2, f"{finding.unit}^2", "energy of the mean")
-    return to_parquet(columns)
+    """Return one row per channel: each removed background term and the energy it took, one after the other."""
+    return to_parquet({"channel": Column(list(finding.table.names), "", "channel name"), **background_columns(finding)})
 
 
 def manifest(facts: Mapping[str, Any], files: Mapping[str, str], made: Mapping[str, Any]) -> bytes:
@@ -152,7 +185,7 @@ def manifest(facts: Mapping[str, Any], files: Mapping[str, str], made: Mapping[s
 
 
 def quality(finding: Finding) -> dict[str, Any]:
-    """Return the numbers that say how much the modes hold."""
+    """Return the numbers that say how much the modes hold and how far they can be relied on."""
     total = finding.factors.energy_total
     captured = float(np.nansum(finding.values**2))
     return {
@@ -164,6 +197,7 @@ def quality(finding: Finding) -> dict[str, Any]:
         "captured_fraction": captured / total,
         "rounding_floor": finding.factors.floor,
         "singular_values": [None if np.isnan(v) else float(v) for v in finding.values],
+        **advice.record(finding.judged),
     }
 
 
@@ -182,7 +216,3 @@ def seal(store: Store, prefix: str, body: bytes) -> bool:
 def shards_digest(shards: Sequence[tuple[str, str]]) -> str:
     """Return the digest of a set of shard versions."""
     return digest_bytes(canonical_json(sorted(shards)))
-
-
-def _padded(values: Array, length: int) -> Array:
-    return np.concatenate([values, np.full(length - len(values), np.nan)])

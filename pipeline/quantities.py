@@ -1,13 +1,17 @@
-"""Durations, sizes in bytes and instants, read from text into exact integers and written back.
+"""Durations, sizes in bytes, instants and angles, read from text and written back.
 
-Fractions only: a value that is not a whole number of nanoseconds or bytes is refused, never rounded. Nothing
-here knows about files, keys or settings; a broken rule says what was wanted and what to write instead.
+All but angles are exact integers: a value that is not a whole number of nanoseconds or bytes is refused, never
+rounded. An angle is a float64 of degrees. Nothing here knows about files, keys or settings; a broken rule says what was
+wanted and what to write instead.
 """
 
 from __future__ import annotations
 
+import math
 import re
+from collections.abc import Collection
 from datetime import UTC, datetime, timedelta
+from decimal import Decimal
 from fractions import Fraction
 from typing import Any
 
@@ -26,6 +30,8 @@ BYTE_UNITS = {"B": 1} | {
     for power, name in enumerate(("k" if suffix == "B" else "K", "M", "G", "T"), start=1)
 }
 
+ANGLE_UNITS = ("deg", "rad")
+
 _DURATION_OTHER_NAMES = {
     "µs": "us", "μs": "us", "usec": "us", "msec": "ms", "sec": "s", "secs": "s", "second": "s", "seconds": "s",
     "m": "min", "mins": "min", "minute": "min", "minutes": "min", "hr": "h", "hrs": "h", "hour": "h", "hours": "h",
@@ -37,7 +43,12 @@ _BYTE_OTHER_NAMES = {
     "gib": "GiB", "tib": "TiB", "kiB": "KiB",
 }  # fmt: skip
 
-_QUANTITY = re.compile(r"([0-9]{1,30}(?:\.[0-9]{1,30})?|\.[0-9]{1,30})[ \t]*([^\W\d_]*)")
+_ANGLE_OTHER_NAMES = {
+    "°": "deg", "º": "deg", "degs": "deg", "degree": "deg", "degrees": "deg", "rads": "rad", "radian": "rad",
+    "radians": "rad",
+}  # fmt: skip
+
+_QUANTITY = re.compile(r"([0-9]{1,30}(?:\.[0-9]{1,30})?|\.[0-9]{1,30})[ \t]*([^\W\d_]*|°)")
 _INSTANT = re.compile(
     r"(\d{4}-\d{2}-\d{2})(?:(?:[Tt]|[ \t]+)(\d{2}:\d{2}(?::\d{2})?)(?:\.(\d{1,9}))?[ \t]*([Zz]|[+-]\d{2}:?\d{2})?)?"
 )
@@ -72,8 +83,8 @@ def parse_duration(value: object) -> int:
     _refuse_bare_number(value, wanted, ("s", "min"))
     number, unit = _split(value, wanted)
     if unit.lower() in ("hz", "khz"):
-        raise RuleBroken(wanted, _step_of_rate(number, unit))
-    factor = _factor(number, unit, DURATION_UNITS, _DURATION_OTHER_NAMES, wanted)
+        raise RuleBroken(wanted, _time_of_rate(number, unit))
+    factor = DURATION_UNITS[_known(number, unit, DURATION_UNITS, _DURATION_OTHER_NAMES, wanted)]
     return _whole(Fraction(number) * factor, "nanoseconds", DURATION_UNITS)
 
 
@@ -93,7 +104,7 @@ def parse_bytes(value: object) -> int:
     wanted = 'must be a size: a number and a unit (B, kB, MB, GB, TB, KiB, MiB, GiB or TiB), such as "2 GiB"'
     _refuse_bare_number(value, wanted, ("MiB", "GiB"))
     number, unit = _split(value, wanted)
-    factor = _factor(number, unit, BYTE_UNITS, _BYTE_OTHER_NAMES, wanted)
+    factor = BYTE_UNITS[_known(number, unit, BYTE_UNITS, _BYTE_OTHER_NAMES, wanted)]
     return _whole(Fraction(number) * factor, "bytes", BYTE_UNITS)
 
 
@@ -126,6 +137,26 @@ def parse_instant(value: object) -> int:
     return nanoseconds
 
 
+def parse_angle(value: object) -> float:
+    """Return an angle in degrees, the float64 nearest to what is written.
+
+    Parameters
+    ----------
+    value : object
+        Text such as ``"5 deg"``, ``"0.5 deg"``, ``"0.1 rad"``; anything else breaks the rule.
+
+    Raises
+    ------
+    RuleBroken
+        If the unit is missing or unknown, or the value negative.
+    """
+    wanted = 'must be an angle: a number and a unit (deg or rad), such as "5 deg"'
+    _refuse_bare_number(value, wanted, ("deg",))
+    number, unit = _split(value, wanted)
+    angle = float(Fraction(number))
+    return angle if _known(number, unit, ANGLE_UNITS, _ANGLE_OTHER_NAMES, wanted) == "deg" else math.degrees(angle)
+
+
 def format_duration(duration_ns: int) -> str:
     """Return the shortest exact text of a duration, such as ``"10 min"``; `parse_duration` reads it back."""
     return _format(duration_ns, DURATION_UNITS)
@@ -136,10 +167,17 @@ def format_bytes(size_bytes: int) -> str:
     return _format(size_bytes, BYTE_UNITS)
 
 
-def _refuse_bare_number(value: object, wanted: str, units: tuple[str, str]) -> None:
+def format_angle(angle_deg: float) -> str:
+    """Return the shortest text of an angle, such as ``"5 deg"``; `parse_angle` reads it back (from 1e-12 deg on)."""
+    digits = f"{Decimal(repr(float(angle_deg))):f}"
+    return f"{digits.removesuffix('.0')} deg"
+
+
+def _refuse_bare_number(value: object, wanted: str, units: tuple[str, ...]) -> None:
     text = str(value).strip()
     if not isinstance(value, bool) and re.fullmatch(r"[0-9.]+", text):
-        raise RuleBroken(wanted, f'the unit is missing: write "{text} {units[0]}" or "{text} {units[1]}"')
+        examples = " or ".join(f'"{text} {unit}"' for unit in units)
+        raise RuleBroken(wanted, f"the unit is missing: write {examples}")
 
 
 def _split(value: object, wanted: str) -> tuple[str, str]:
@@ -150,9 +188,10 @@ def _split(value: object, wanted: str) -> tuple[str, str]:
     return found[1], found[2]
 
 
-def _factor(number: str, unit: str, units: dict[str, int], other_names: dict[str, str], wanted: str) -> int:
+def _known(number: str, unit: str, units: Collection[str], other_names: dict[str, str], wanted: str) -> str:
+    """Return the unit if it is one of those known; else the rule is broken, with the unit that may have been meant."""
     if unit in units:
-        return units[unit]
+        return unit
     meant = other_names.get(unit) or other_names.get(unit.lower()) or ""
     meant = meant or next((known for known in units if known.lower() == unit.lower()), "")
     raise RuleBroken(wanted, f'write "{number} {meant}"' if meant else f"{unit} is not one of the units")
@@ -167,12 +206,13 @@ def _whole(amount: Fraction, plural: str, units: dict[str, int]) -> int:
     return int(amount)
 
 
-def _step_of_rate(number: str, unit: str) -> str:
+def _time_of_rate(number: str, unit: str) -> str:
+    """Return the remedy for a rate: of samples it tells the step between two, of a cycle its period."""
     rate = Fraction(number) * (1000 if unit.lower() == "khz" else 1)
-    step_ns = 10**9 / rate if rate else Fraction(0)
-    if not step_ns or step_ns.denominator != 1:
-        return "give the step from one sample to the next instead of the rate"
-    return f'give the step instead of the rate: "{format_duration(int(step_ns))}"'
+    time_ns = 10**9 / rate if rate else Fraction(0)
+    if not time_ns or time_ns.denominator != 1:
+        return "give the time from one to the next instead of the rate"
+    return f'give the time from one to the next instead of the rate: "{format_duration(int(time_ns))}"'
 
 
 def _offset(zone: str | None) -> str:

@@ -6,6 +6,7 @@ Only published results are seen: a folder without a manifest does not exist here
 from __future__ import annotations
 
 import json
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
@@ -17,6 +18,7 @@ import pyarrow as pa
 import pyarrow.compute as pc
 
 from shardfold import layout
+from shardfold.background_columns import rebuilt
 from shardfold.errors import InputError, RecordCorrupt
 from shardfold.ids import digest_bytes
 from shardfold.publish import CAUTION
@@ -24,6 +26,9 @@ from shardfold.store import Store, StoreSettings, connect
 from shardfold.tables import mode_names, read_table
 
 Array = npt.NDArray[Any]
+
+LEAST_SHOWN_DEG = 0.001
+UNTOLD_DEG = 45.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -123,31 +128,60 @@ class Result:
         c = np.array([series.column(n).to_numpy() for n in mode_names(rank, "c")[:held]]).reshape(held, len(series))
         u = np.array([self.modes.column(n).to_numpy() for n in mode_names(rank, "mode")[:held]]).T[rows]
         values = u @ c
-        if "mean" in self.background.column_names:
-            values += self.background.column("mean").to_numpy()[rows, np.newaxis]
+        values += self._background(rows, series)
         keys = {name: series.column(name) for name in series.column_names if not name.startswith("c_")}
         return pa.table(keys | dict(zip(chosen, values, strict=True)))
 
+    def _background(self, rows: Sequence[int], series: pa.Table) -> Array:
+        table = self.background
+        columns = {name: table.column(name).to_numpy()[rows] for name in table.column_names if name != "channel"}
+        facts = {
+            field.name: {key.decode(): value.decode() for key, value in (field.metadata or {}).items()}
+            for field in table.schema
+        }
+        if "time" in series.column_names:
+            times = series.column("time").cast(pa.int64()).to_numpy()
+        else:
+            times = np.zeros(len(series), np.int64)
+        return rebuilt(columns, facts, times)
+
+    @property
+    def bounds(self) -> pa.Table:
+        """Return how far each mode can be relied on: angles in degrees, groups, verdicts, remedies."""
+        return self.mode_table.select(
+            ["mode", "angle_bound_deg", "mac_at_least", "coefficient_angle_bound_deg", "sampling_angle_deg",
+             "north_angle_deg", "group", "verdict", "remedy"]
+        )  # fmt: skip
+
+    @property
+    def next_step(self) -> str:
+        """Return what to do next, in a line."""
+        return str(self.manifest["quality"]["next"])
+
     def __repr__(self) -> str:
         head = f"Result {self.location}: {self.manifest['campaign']}"
-        return "\n".join([head, *(" ".join(row) for row in mode_rows(self)), CAUTION])
+        return "\n".join([head, *(" ".join(row) for row in mode_rows(self)), self.next_step, CAUTION])
 
 
 def mode_rows(result: Result) -> list[list[str]]:
-    """Return the mode table as text cells, heading first; what cannot be said is a dash."""
-    unit = result.mode_table.schema.field("rms").metadata.get(b"unit", b"").decode()
-    heading = ["mode", "share %", "cumulative %", f"rms {unit}".strip(), "peak at", "rms at peak", "frequency Hz"]
-    rows = [heading]
+    """Return the mode table as text cells, heading first; what cannot be said is a dash or said so.
+
+    Bounds are rounded to the safe side.
+    """
+    rows = [["mode", "share %", "total %", "accuracy deg", "MAC at least", "sampling deg", "group", "verdict", "Hz"]]
     for row in result.mode_table.to_pylist():
         share, total = row["energy_fraction"], row["energy_cumulative"]
+        held = share is not None
         rows.append(
             [
                 str(row["mode"]),
-                "under floor" if share is None else f"{100 * share:.3f}",
+                f"{100 * share:.3f}" if held else "under floor",
                 "-" if total is None else f"{100 * total:.3f}",
-                _figure(row["rms"]),
-                row["peak_channel"] or "-",
-                _figure(row["rms_at_peak"]),
+                _bound(row["angle_bound_deg"]) if held else "-",
+                _least(row["mac_at_least"]),
+                _sampling(row["sampling_angle_deg"]),
+                row["group"] or "-",
+                row["verdict"] or "-",
                 _figure(row["dominant_hz"]),
             ]
         )
@@ -228,3 +262,23 @@ def _between(table: pa.Table, start: Any, stop: Any) -> pa.Table:
 
 def _figure(value: float | None) -> str:
     return "-" if value is None else f"{value:.4g}"
+
+
+def _bound(degrees: float | None, absent: str = "no bound") -> str:
+    """Return an angle rounded up to two digits."""
+    if degrees is None:
+        return absent
+    if degrees < LEAST_SHOWN_DEG:
+        return f"<{LEAST_SHOWN_DEG:g}"
+    step = 10.0 ** (math.floor(math.log10(degrees)) - 1)
+    return f"{math.ceil(degrees / step - 1e-9) * step:.2g}"
+
+
+def _sampling(degrees: float | None) -> str:
+    """Return a sampling angle; at 45 degrees a mode is told from its neighbours no more."""
+    return ">45" if degrees is not None and degrees > UNTOLD_DEG else _bound(degrees, absent="-")
+
+
+def _least(share: float | None) -> str:
+    """Return a least value rounded down to four decimals."""
+    return "-" if share is None else f"{math.floor(share * 1e4) / 1e4:.4f}"

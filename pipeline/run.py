@@ -1,31 +1,33 @@
 """The page to read first: a run in seven calls.
 
-Look at the campaign and its dossier; refuse what cannot be or is too large; create the dossier; plan a read; bring its
-cells into storage; freeze the probe of the next; conclude with a result. Every call leaves storage in a state from
-which the same command goes on, so a run may be killed anywhere.
+Look at the campaign and its dossier; refuse what cannot be or is too large; create the dossier; bring the cells of a
+read into storage; judge what it can tell; freeze the probe of the next if there is to be one; conclude with a result.
+Every call leaves storage in a state from which the same command goes on, so a run may be killed anywhere.
 """
 
 from __future__ import annotations
 
 import time
-from collections.abc import Callable, Sequence
+from collections.abc import Callable
 from dataclasses import dataclass, field
 from datetime import UTC, datetime
 from importlib.metadata import version
 from typing import Any
 
 from shardfold import budget, dossier, layout
-from shardfold.conclude import Conclusion, conclude, sum_of
-from shardfold.design import Design
-from shardfold.errors import InputError, RecordCorrupt
+from shardfold.advice import reading_words
+from shardfold.assess import Assessment, assess, sum_of
+from shardfold.conclude import Conclusion, conclude, standing
+from shardfold.design import Design, expected_rank
+from shardfold.errors import InputError, PlanRefused, RecordCorrupt
 from shardfold.events import Listener, Noted
 from shardfold.executor import Deferred, Executor
 from shardfold.finish import too_few_samples, write_probe
-from shardfold.ingest import Intake, bring_in
+from shardfold.ingest import Intake, Pass, bring_in
 from shardfold.job import Job
+from shardfold.job_values import MOST_READS
 from shardfold.kernels.factors import probe_width
 from shardfold.kernels.whole import Shape
-from shardfold.plan import Cell
 from shardfold.refusals import found_in, nothing_left
 from shardfold.site import Site, look
 
@@ -82,19 +84,15 @@ def run(job: Job, make_executor: Callable[[], Executor], listen: Listener) -> Re
         check_rank(site)
         intake = _intake(site, executor, listen)
         reads = reads_of(job, site.dossier.design)
-        if reads < job.modes.reads:
-            listen(Noted("the probe is the identity and exact: one read is enough"))
+        if job.modes.reads != "auto" and reads < job.modes.reads:
+            listen(Noted("all channels are kept and nothing is lost: one read is enough"))
         _refuse_too_large(site, intake, reads)
         if not site.exists and dossier.create(site.dossier).design != site.dossier.design:
             return run(job, make_executor, listen)  # another writer was faster: look again, at what he made
-        probes: list[str] = []
-        for read in range(1, reads + 1):
-            shape, digest = plan_read(site, intake, read)
-            cells = bring_in(intake, read, shape, digest)
-            probes.append(digest)
-            if read < reads:
-                _freeze_probe(site, intake, read, shape, cells)
-        return _report(site, intake, conclude(site, intake, shape, cells, probes, started))
+        done = _next_read(site, intake, None)
+        while (end := _end(site, intake, done, reads, started)) is None:
+            done = _next_read(site, intake, done)
+        return _report(site, intake, end)
     finally:
         executor.close()
 
@@ -118,11 +116,75 @@ def _intake(site: Site, executor: Executor, listen: Listener) -> Intake:
 
 
 def reads_of(job: Job, design: Design) -> int:
-    """Return how many reads are made: one where the probe is the identity, which no further read can improve."""
-    return 1 if design.identity else job.modes.reads
+    """Return how many reads are made whatever they bring: one where no channel is lost, which none can improve."""
+    return 1 if design.identity or job.modes.reads == "auto" else job.modes.reads
 
 
-def plan_read(site: Site, intake: Intake, read: int) -> tuple[Shape, str]:
+def _next_read(site: Site, intake: Intake, before: Pass | None) -> Pass:
+    """Carry out the first read, or the one after ``before`` with a probe made from it."""
+    read = 1 if before is None else before.read + 1
+    if before is not None and dossier.probe_facts(site.dossier.store, site.dossier.design, read) is None:
+        write_probe(site.dossier, sum_of(site, intake, before), expected_rank(site.job.modes.rank), read)
+    shape, digest = _plan_read(site, read)
+    cells = bring_in(intake, read, shape, digest)
+    return Pass(read, shape, cells, (*(before.probes if before else ()), digest))
+
+
+def _end(site: Site, intake: Intake, done: Pass, reads: int, started: datetime) -> Conclusion | None:
+    """Return the result that stands or is published now, or ``None`` if another read comes first."""
+    if done.read < reads:
+        return None
+    auto = site.job.modes.reads == "auto"
+    first = auto and done.read == 1
+    end = _standing_of_any_read(site, intake, done) if first else standing(site, intake, done.probes)
+    if end is not None:
+        return end
+    judged = assess(site, intake, done)
+    if auto and _reads_again(site, intake, done, judged):
+        return None
+    return conclude(site, intake, done, judged, started)
+
+
+def _reads_again(site: Site, intake: Intake, done: Pass, judged: Assessment) -> bool:
+    """Return whether another read is worth its price and fits into memory, and say why or why not."""
+    if not judged.decision.again:
+        intake.listen(Noted(f"no further read: {reading_words(judged)}"))
+        return False
+    refused = _too_large_for_another(site, intake, done)
+    if refused is not None:
+        intake.listen(Noted(f"another read would help, but {refused}"))
+        return False
+    intake.listen(Noted(f"reading again: {reading_words(judged)}"))
+    return True
+
+
+def _too_large_for_another(site: Site, intake: Intake, done: Pass) -> PlanRefused | None:
+    design, engine = site.dossier.design, site.job.engine
+    rank = expected_rank(site.job.modes.rank)
+    modes = design.most_modes(site.job.modes.rank)
+    shape = design.shape(probe_width(done.shape.k, rank))
+    cells = intake.cells(done.read + 1, shape, "")
+    try:
+        plan = budget.budget(design, shape, cells, modes, 1, engine.workers == "serial")
+        budget.check(plan, engine.memory_bytes, cells)
+    except PlanRefused as error:
+        return error
+    return None
+
+
+def _standing_of_any_read(site: Site, intake: Intake, first: Pass) -> Conclusion | None:
+    """Return the result that stands for these inputs, whichever number of reads it took."""
+    probes = list(first.probes)
+    for read in range(2, MOST_READS + 2):
+        end = standing(site, intake, probes)
+        facts = dossier.probe_facts(site.dossier.store, site.dossier.design, read)
+        if end is not None or facts is None or site.dossier.design.identity:
+            return end
+        probes.append(facts[1])
+    return None
+
+
+def _plan_read(site: Site, read: int) -> tuple[Shape, str]:
     """Return shape and probe digest of a read whose probe is frozen."""
     facts = dossier.probe_facts(site.dossier.store, site.dossier.design, read)
     if facts is None:
@@ -132,7 +194,7 @@ def plan_read(site: Site, intake: Intake, read: int) -> tuple[Shape, str]:
             rule="a dossier keeps the probe of every read",
             remedy="restore the object from a copy",
         )
-    return site.dossier.design.shape(read, facts[0]), facts[1]
+    return site.dossier.design.shape(facts[0]), facts[1]
 
 
 def shapes_of(design: Design, rank: int, reads: int) -> list[Shape]:
@@ -140,47 +202,45 @@ def shapes_of(design: Design, rank: int, reads: int) -> list[Shape]:
     widths = [design.width]
     for _ in range(1, reads):
         widths.append(probe_width(widths[-1], rank))
-    return [design.shape(read, width) for read, width in enumerate(widths, 1)]
+    return [design.shape(width) for width in widths]
 
 
 def _refuse_too_large(site: Site, intake: Intake, reads: int) -> None:
     """Refuse before the first read, and before a dossier is made, what any of the reads has too little memory for."""
-    design, engine, rank = site.dossier.design, site.job.engine, site.job.modes.rank
-    for read, shape in enumerate(shapes_of(design, rank, reads), 1):
+    design, engine = site.dossier.design, site.job.engine
+    modes = design.most_modes(site.job.modes.rank)
+    for read, shape in enumerate(shapes_of(design, expected_rank(site.job.modes.rank), reads), 1):
         cells = intake.cells(read, shape, "")
         if not cells and not site.exists:
             raise nothing_left(intake.refused)
-        plan = budget.budget(design, shape, cells, rank, 1, engine.workers == "serial")
+        plan = budget.budget(design, shape, cells, modes, 1, engine.workers == "serial")
         budget.check(plan, engine.memory_bytes, cells)
 
 
 def check_rank(site: Site) -> None:
     """Refuse more modes than there are samples or channels, or than the probe can carry."""
+    rank = site.job.modes.rank
+    if not isinstance(rank, int):
+        return
     rows = sum(shard.rows for shard in site.shards.values())
-    if site.job.modes.rank > rows:
-        raise too_few_samples(site.job.modes.rank, rows)
-    if site.job.modes.rank > site.dossier.design.channels:
+    if rank > rows:
+        raise too_few_samples(rank, rows)
+    if rank > site.dossier.design.channels:
         raise InputError(
             "more modes are asked for than there are channels",
             where="modes.rank",
             rule=f"at most the number of channels, {site.dossier.design.channels}",
-            got=str(site.job.modes.rank),
+            got=str(rank),
             remedy=f"--set modes.rank={site.dossier.design.channels}",
         )
-    if not site.dossier.design.identity and site.job.modes.rank >= site.dossier.design.width:
+    if not site.dossier.design.identity and rank >= site.dossier.design.width:
         raise InputError(
             "the dossier's probe is too narrow for the rank",
             where="modes.rank",
             rule=f"less than the dossier's design.width, {site.dossier.design.width}",
-            got=str(site.job.modes.rank),
+            got=str(rank),
             remedy="a smaller rank, or a new dossier",
         )
-
-
-def _freeze_probe(site: Site, intake: Intake, read: int, shape: Shape, cells: Sequence[Cell]) -> None:
-    """Freeze the probe of the next read, unless an earlier run did."""
-    if dossier.probe_facts(site.dossier.store, site.dossier.design, read + 1) is None:
-        write_probe(site.dossier, sum_of(site, intake, read, shape, cells), site.job.modes.rank, read + 1)
 
 
 def _report(site: Site, intake: Intake, end: Conclusion) -> Report:

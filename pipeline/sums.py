@@ -10,9 +10,10 @@ from collections.abc import Sequence
 from shardfold import layout
 from shardfold.events import Listener, StageDone, StageStarted, TaskDone
 from shardfold.executor import Executor
-from shardfold.kernels.whole import Shape, Summary
+from shardfold.kernels.whole import Shape
 from shardfold.plan import Cell, by_leaf, tree
 from shardfold.store import Store
+from shardfold.summaries import AnySummary
 from shardfold.tasks import AddUp, Workplace, load_summary
 
 
@@ -24,7 +25,7 @@ def add_all(
     read: int,
     shape: Shape,
     cells: Sequence[Cell],
-) -> Summary:
+) -> AnySummary:
     """Return the sum of all cells of a read; the sums on the way are in storage afterwards."""
     levels = tree(read, leaf_names(cells), workplace.design.kernel)
     stored = {parsed[1] for info in store.list(layout.TREE) if (parsed := layout.parse_node(info.key)) is not None}
@@ -37,7 +38,7 @@ def add_all(
                 listen(TaskDone("add up"))
         listen(StageDone("add up"))
     (root,) = levels[-1]
-    return load_summary(store, layout.node_key(read, root.name), "sum", shape)
+    return load_summary(store, layout.node_key(read, root.name), "sum", workplace.design, shape)
 
 
 def leaf_names(cells: Sequence[Cell]) -> dict[int, tuple[str, ...]]:

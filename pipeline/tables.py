@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import io
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
@@ -20,12 +20,16 @@ Array = npt.NDArray[Any]
 
 @dataclass(frozen=True)
 class Column:
-    """One column: values, unit and what it is. Floats that are NaN are written as null: there is no such figure."""
+    """One column: values, unit and what it is. Floats that are NaN are written as null: there is no such figure.
+
+    ``facts`` are further entries of the field's metadata.
+    """
 
     values: Sequence[Any] | Array
     unit: str
     about: str
     kind: Any = None
+    facts: Mapping[str, str] = field(default_factory=dict)
 
     def array(self) -> Any:
         """Return the Arrow array."""
@@ -38,7 +42,7 @@ def to_parquet(columns: Mapping[str, Column], facts: Mapping[str, str] | None = 
     """Return a Parquet file of the columns, the same bytes for the same values."""
     arrays = {name: column.array() for name, column in columns.items()}
     fields = [
-        pa.field(name, arrays[name].type, metadata={"unit": column.unit, "description": column.about})
+        pa.field(name, arrays[name].type, metadata={"unit": column.unit, "description": column.about, **column.facts})
         for name, column in columns.items()
     ]
     return arrow_bytes(pa.table(list(arrays.values()), schema=pa.schema(fields, metadata=dict(facts or {}))))

@@ -27,13 +27,16 @@ from shardfold.gather import CellGather
 from shardfold.ids import digest_bytes
 from shardfold.job import Source
 from shardfold.kernels.addressed import STREAM_CHECK, name_keys, normals
+from shardfold.kernels.background import Terms, functions
 from shardfold.kernels.blocks import Preparation
 from shardfold.kernels.spectra import segment_power
-from shardfold.kernels.whole import Probe, Shape, Summary, from_arrays, merge_into, to_arrays
+from shardfold.kernels.whole import Probe, Shape
+from shardfold.leaf_terms import TakeTerms, TermsTaken, take_terms
 from shardfold.plan import Cell, Node, Piece
 from shardfold.project import CellProjector
 from shardfold.readers import Fetched, Reader, reader_for
 from shardfold.store import Counting, Store, StoreSettings, connect
+from shardfold.summaries import AnySummary, arrays_of, from_arrays, merge_into, to_arrays
 from shardfold.tables import coefficient_table
 
 Array = npt.NDArray[Any]
@@ -77,10 +80,24 @@ class CoefficientMap:
         Row map; with the identity probe the transposed modes.
     centre : ndarray (k,)
         What is taken off before: the mean in the space of X, zeros where the mean is kept.
+    removed : tuple of int
+        Functions of time that are taken off as well.
+    weights, about : ndarray (r, p'), (p',)
+        Their share in the coefficients, and what is taken off the functions before.
     """
 
     rows: Array
     centre: Array
+    removed: tuple[int, ...]
+    weights: Array
+    about: Array
+
+    def background(self, terms: Terms, times: Array) -> Array:
+        """Return what the background holds of the coefficients at some times (r, n), zeros (r, 1) if nothing."""
+        if not self.removed:
+            return np.zeros((len(self.rows), 1))
+        known = functions(terms, times)[list(self.removed)]
+        return self.weights @ (known - self.about[:, np.newaxis])
 
 
 @dataclass(frozen=True)
@@ -135,8 +152,8 @@ class Refusal:
     error: ShardRefused
 
 
-Task: TypeAlias = ReadCell | AddUp | WriteCoefficients
-Outcome: TypeAlias = CellRead | Added | PartWritten | Refusal
+Task: TypeAlias = ReadCell | AddUp | TakeTerms | WriteCoefficients
+Outcome: TypeAlias = CellRead | Added | TermsTaken | PartWritten | Refusal
 
 
 def perform(workplace: Workplace, task: Task) -> Outcome:
@@ -148,6 +165,8 @@ def perform(workplace: Workplace, task: Task) -> Outcome:
                 return read_cell(workplace, task)
             if isinstance(task, AddUp):
                 return add_up(workplace, task)
+            if isinstance(task, TakeTerms):
+                return take_terms(_desk(workplace).dossier, workplace.design, task)
             return write_coefficients(workplace, task)
         except ShardRefused as error:
             return Refusal(error)
@@ -183,11 +202,11 @@ def add_up(workplace: Workplace, task: AddUp) -> Added:
     node = task.node
     bottom = node.level == 0
 
-    def load(number: int, names: tuple[str, ...]) -> Summary:
-        total: Summary | None = None
+    def load(number: int, names: tuple[str, ...]) -> AnySummary:
+        total: AnySummary | None = None
         for name in names:
             key = layout.cell_key(task.read, number, name) if bottom else layout.node_key(task.read, name)
-            part = load_summary(store, key, "cell" if bottom else "sum", task.shape)
+            part = load_summary(store, key, "cell" if bottom else "sum", workplace.design, task.shape)
             if total is None:
                 total = part
             else:
@@ -201,7 +220,9 @@ def add_up(workplace: Workplace, task: AddUp) -> Added:
     return Added()
 
 
-def dyadic_sum(children: dict[int, tuple[str, ...]], load: Callable[[int, tuple[str, ...]], Summary]) -> Summary:
+def dyadic_sum(
+    children: dict[int, tuple[str, ...]], load: Callable[[int, tuple[str, ...]], AnySummary]
+) -> AnySummary:
     """Return the sum of the children in the order of the binary tree over their numbers.
 
     Two neighbours are merged as soon as both are complete, so at most one summary per level is held. The order
@@ -220,14 +241,10 @@ def dyadic_sum(children: dict[int, tuple[str, ...]], load: Callable[[int, tuple[
     return total
 
 
-def load_summary(store: Store, key: str, kind: str, shape: Shape) -> Summary:
+def load_summary(store: Store, key: str, kind: str, design: Design, shape: Shape) -> AnySummary:
     """Return the summary of a stored cell or sum, without its X; the arrays are owned and writable."""
     header = artifacts.read_header(store, key, kind)
-    names = [name for name in header.arrays if name in _SUMMARY_ARRAYS]
-    return from_arrays(shape, artifacts.read_arrays(store, key, header, names))
-
-
-_SUMMARY_ARRAYS = ("n", "mean", "energy", "outer", "inner", "right_mean", "low", "high", "gaps")
+    return from_arrays(design, shape, artifacts.read_arrays(store, key, header, arrays_of(design)))
 
 
 def write_coefficients(workplace: Workplace, task: WriteCoefficients) -> PartWritten:
@@ -275,6 +292,7 @@ def _coefficients_of_x(workplace: Workplace, desk: _Desk, cell: Cell, task: Writ
         block = slice(start, start + int(count))
         offset = task.mapping.rows @ (centre - task.mapping.centre)
         values[:, block] = task.mapping.rows @ x[block].T.astype(np.float64) + offset[:, None]
+        values[:, block] -= task.mapping.background(workplace.design.terms, times[block])
         start += int(count)
     pieces = header.facts["pieces"]
     owners = np.array([piece["shard"] if not workplace.design.timed else "" for piece in pieces])
@@ -287,7 +305,9 @@ def _coefficients_by_reading(
     mapping = task.mapping
     projector = CellProjector(workplace.design, desk.preparation, mapping.rows, mapping.centre, cell.dtype)
     _each_batch(desk, cell, projector)
-    return projector.finish()
+    times, owners, values = projector.finish()
+    values -= mapping.background(workplace.design.terms, times)
+    return times, owners, values
 
 
 def _each_batch(desk: _Desk, cell: Cell, sink: CellGather | CellProjector) -> None:

@@ -19,6 +19,9 @@ dossier:
 ARRAY = WIDE.replace("layout: wide", "layout: array").replace("time: t", "time: {from_name: '(\\d+)', step: 125 ms}")
 DURATION = 'must be a duration: a number and a unit (ns, us, ms, s, min, h or d), such as "10 min"'
 SIZE = 'must be a size: a number and a unit (B, kB, MB, GB, TB, KiB, MiB, GiB or TiB), such as "2 GiB"'
+ANGLE = 'must be an angle: a number and a unit (deg or rad), such as "5 deg"'
+RANK = "must be noise_edge, {energy: SHARE}, {angle: ANGLE} or a whole number, 1 or more"
+BACKGROUND = "design.background={trend: true, cycles: [12.42 h, 3.6 s]}"
 
 
 def faults_of(text: str, *overrides: str, endpoint: str | None = None) -> list[str]:

@@ -123,9 +123,12 @@ def test_show_prints_the_mode_table_and_the_caution_once(finished: Desk) -> None
     answers = [shardfold("show", place) for place in (f"{finished.dossier}/latest", folder, f"{folder}/")]
     assert len({(answer.status, answer.out, answer.err) for answer in answers}) == 1
     lines = answers[0].out.splitlines()
-    assert lines[0] == "desk: 40 channels, 240 samples, 4 shards, 1 read(s)"
+    assert lines[0] == "desk: 40 channels, 240 samples, 4 shards, 1 read(s); removed: mean; tolerance 5 deg"
     assert [line.split()[0] for line in lines[2:5]] == ["1", "2", "3"]
-    assert " ".join(" ".join(lines[5:]).split()) == CAUTION
+    told = " ".join(" ".join(lines[5:]).split())
+    assert told.startswith("Next: 0 of 3 modes are resolved within 5 deg; short data: 1-3 (")
+    assert told.endswith(CAUTION)
+    assert told.count(CAUTION) == 1
     quiet = shardfold("show", folder, "--quiet")
     assert quiet.out.splitlines() == lines[:5]
 

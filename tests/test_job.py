@@ -6,7 +6,7 @@ import pickle
 from pathlib import Path
 
 import pytest
-from job_texts import ARRAY, DURATION, WIDE, faults_of, with_line
+from job_texts import ARRAY, DURATION, RANK, WIDE, faults_of, with_line
 
 from shardfold.errors import JobInvalid
 from shardfold.ids import canonical_json, digest_bytes
@@ -24,8 +24,8 @@ def test_defaults_are_filled_in():
     design = job.design
     assert (design.scale, design.gaps, design.background.mean, design.summary) == ("none", "refuse", True, "auto")
     assert (design.width, design.leaf, design.blas, design.seed) == ("auto", "auto", "any", 20310301)
-    assert design.mixed_units is False
-    assert (job.modes.rank, job.modes.reads, job.modes.remove) == (10, 1, ("mean",))
+    assert (design.mixed_units, design.background.trend, design.background.cycles) == (False, False, ())
+    assert (job.modes.rank, job.modes.reads, job.modes.remove, job.modes.tolerance_deg) == (10, 1, ("mean",), 5.0)
     assert (job.engine.workers, job.engine.address, job.engine.memory_bytes) == ("auto", None, 2 * 2**30)
     assert (job.overrides, job.path, job.text_digest) == ((), None, digest_bytes(WIDE.encode()))
 
@@ -76,7 +76,8 @@ def test_records_are_canonical():
     job = parse_job(WIDE, "x")
     spelled = parse_job(WIDE, "x", ["design.gaps=refuse", "modes.rank=10", "source.settle=1 s", "engine.workers=3"])
     assert canonical_json(job.design_record()) == canonical_json(spelled.design_record())
-    assert job.modes_record() == spelled.modes_record() == {"rank": 10, "reads": 1, "remove": ["mean"]}
+    modes = {"rank": 10, "reads": 1, "remove": ["mean"], "tolerance_deg": 5.0}
+    assert job.modes_record() == spelled.modes_record() == modes
     assert job.design_record()["source"]["time"] == {"column": "t"}
     moved = parse_job(WIDE.replace("s3://skelbeck/raw/", "/mnt/raw"), "x")
     assert moved.design_record() == job.design_record()
@@ -117,7 +118,7 @@ rank: 3
         f"bridge.yaml:10: design.leaf: {DURATION.replace('must be', 'must be auto, or')} (got 010); the unit is "
         'missing: write "010 s" or "010 min"',
         "bridge.yaml:11: rank: is not a known key; did you mean modes.rank?",
-        "--set: modes.rank: must be a whole number, 1 or more (got 0)",
+        f"--set: modes.rank: {RANK} (got 0)",
         "--set: engine.worker: is not a known key; did you mean engine.workers?",
     ]
 

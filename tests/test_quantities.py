@@ -1,8 +1,9 @@
-"""Durations, sizes and instants: exact integers from text, and refusals that say what to write."""
+"""Durations, sizes, instants and angles: exact numbers from text, and refusals that say what to write."""
 
 from __future__ import annotations
 
 import contextlib
+import math
 import pickle
 from datetime import UTC, datetime, timedelta
 from fractions import Fraction
@@ -11,13 +12,16 @@ import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
+from job_texts import ANGLE
 
 from shardfold.quantities import (
     BYTE_UNITS,
     DURATION_UNITS,
     RuleBroken,
+    format_angle,
     format_bytes,
     format_duration,
+    parse_angle,
     parse_bytes,
     parse_duration,
     parse_instant,
@@ -65,10 +69,11 @@ def test_decimal_fractions_do_not_pass_through_floats():
         ("5 MS", 'write "5 ms"'),
         ("2 weeks", "weeks is not one of the units"),
         ("-1 s", "it cannot be negative"),
-        ("8 Hz", 'give the step instead of the rate: "125 ms"'),
-        ("1 kHz", 'give the step instead of the rate: "1 ms"'),
-        ("30 Hz", "give the step from one sample to the next instead of the rate"),
-        ("0 Hz", "give the step from one sample to the next instead of the rate"),
+        ("8 Hz", 'give the time from one to the next instead of the rate: "125 ms"'),
+        ("1 kHz", 'give the time from one to the next instead of the rate: "1 ms"'),
+        ("30 Hz", "give the time from one to the next instead of the rate"),
+        ("0 Hz", "give the time from one to the next instead of the rate"),
+        ("5°", "° is not one of the units"),
         ("10:00", ""),
         ("PT10M", ""),
         ("1e3 s", ""),
@@ -209,15 +214,66 @@ def test_decimals_are_exact_or_refused(digits, places, unit):
 @given(st.text(max_size=30) | st.integers() | st.floats() | st.none() | st.booleans())
 def test_any_value_is_a_quantity_or_breaks_a_rule(value):
     """No other error leaves."""
-    for parse in (parse_duration, parse_bytes, parse_instant):
+    for parse, kind in ((parse_duration, int), (parse_bytes, int), (parse_instant, int), (parse_angle, float)):
         with contextlib.suppress(RuleBroken):
-            assert isinstance(parse(value), int)
+            assert isinstance(parse(value), kind)
+
+
+@pytest.mark.parametrize(
+    ("text", "angle_deg"),
+    [("5 deg", 5.0), ("0.5deg", 0.5), (" .1 deg ", 0.1), ("90 deg", 90.0), ("0 deg", 0.0), ("400 deg", 400.0)],
+)
+def test_angles_are_degrees(text, angle_deg):
+    """The float64 nearest to the decimal digits; no range of its own."""
+    assert parse_angle(text) == angle_deg
+
+
+@given(st.fractions(0, 7, max_denominator=10**6))
+def test_radians_become_degrees(turn):
+    """To rounding, against rational arithmetic with 30 digits of pi."""
+    pi = Fraction("3.141592653589793238462643383280")
+    got = parse_angle(f"{float(turn):.15f} rad")
+    assert abs(Fraction(got) - Fraction(f"{float(turn):.15f}") * 180 / pi) <= Fraction(4 * math.ulp(got or 1e-300))
+
+
+@given(st.floats(1e-12, 1e6))
+def test_what_is_formatted_as_an_angle_reads_back(angle_deg):
+    """To the bit, without an exponent."""
+    assert parse_angle(format_angle(angle_deg)) == angle_deg
+    assert "e" not in format_angle(angle_deg).removesuffix(" deg")
+
+
+@pytest.mark.parametrize(
+    ("value", "remedy"),
+    [
+        (5, 'the unit is missing: write "5 deg"'),
+        ("5", 'the unit is missing: write "5 deg"'),
+        (2.5, 'the unit is missing: write "2.5 deg"'),
+        ("5°", 'write "5 deg"'),
+        ("5 degrees", 'write "5 deg"'),
+        ("5 Deg", 'write "5 deg"'),
+        ("1 radian", 'write "1 rad"'),
+        ("5 gon", "gon is not one of the units"),
+        ("5 min", "min is not one of the units"),
+        ("-5 deg", "it cannot be negative"),
+        ("5e-1 deg", ""),
+        ("tight", ""),
+        (None, ""),
+        (True, ""),
+    ],
+)
+def test_what_is_no_angle_is_refused_with_the_nearest_that_is_one(value, remedy):
+    """A number alone may be meant in degrees, which is then to be written."""
+    with pytest.raises(RuleBroken) as caught:
+        parse_angle(value)
+    assert (caught.value.rule, caught.value.remedy) == (ANGLE, remedy)
 
 
 def test_formats_are_the_shortest():
     """The largest unit that is exact."""
     assert [format_duration(n) for n in (0, 90 * 10**9, 86400 * 10**9, 1500)] == ["0 ns", "90 s", "1 d", "1500 ns"]
     assert [format_bytes(n) for n in (0, 2 * 1024**3, 2 * 10**9, 1500)] == ["0 B", "2 GiB", "2 GB", "1500 B"]
+    assert [format_angle(x) for x in (5, 0.5, 12.25, 1e-5)] == ["5 deg", "0.5 deg", "12.25 deg", "0.00001 deg"]
     assert set(BYTE_UNITS) == {"B", "kB", "MB", "GB", "TB", "KiB", "MiB", "GiB", "TiB"}
 
 

@@ -81,7 +81,7 @@ def _plan(job: Job, workers: int) -> budget.Budget:
     """Return the plan of the run just made."""
     site = look(job, lambda event: None)
     design = site.dossier.design
-    shape = design.shape(1, design.width)
+    shape = design.shape(design.width)
     cells = cut(list(site.shards.values()), design, 1, shape, "").cells
     return budget.budget(design, shape, cells, job.modes.rank, workers, False)
 

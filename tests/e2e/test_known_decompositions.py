@@ -1,7 +1,8 @@
 """Matrices whose decomposition is known in closed form come out right through the whole pipeline on object storage.
 
 Sources stand beside each check; [M] marks a citation from memory that was confirmed by computing. Identity probes are
-held to the accuracy of double precision, real probes to what two reads promise.
+held to the accuracy of double precision, real probes to what two reads promise. Labels A1 to A15 number the known
+decompositions; more are in ``test_outside_matrices.py`` and ``test_outside_oscillations.py``, in local folders.
 """
 
 from __future__ import annotations
@@ -66,10 +67,14 @@ def summation(n: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
 
 @pytest.mark.parametrize(
     ("design", "reads", "value_error", "worst_sine"),
-    [({"width": 100}, 1, 1e-12, 1e-11), ({"width": 40}, 2, 5e-6, 1e-3)],
-    ids=["identity", "two-reads"],
+    [
+        ({"summary": "whole", "width": 100}, 1, 1e-12, 1e-11),
+        ({"summary": "exact"}, 1, 1e-12, 1e-11),
+        ({"width": 40}, 2, 5e-6, 1e-3),
+    ],
+    ids=["identity", "exact", "two-reads"],
 )
-def test_cumulative_sum(
+def test_a1_cumulative_sum(
     shore: Shore, design: dict[str, Any], reads: int, value_error: float, worst_sine: float
 ) -> None:
     matrix, values, left = summation(200)
@@ -84,7 +89,7 @@ def test_cumulative_sum(
         np.testing.assert_allclose(found.column("energy_fraction"), values[:5] ** 2 / 20_100, rtol=1e-12)
 
 
-def test_discrete_brownian_bridge(shore: Shore) -> None:
+def test_a4_discrete_brownian_bridge(shore: Shore) -> None:
     # min(i,j) - ij/(n+1) is the inverse of tridiag(-1, 2, -1), whose eigenvalues are 4 sin^2(k pi / (2(n+1))) and whose
     # vectors are sines: Strang, SIAM Review 41 (1999) 135 [M].
     n, rank = 50, 6
@@ -99,7 +104,7 @@ def test_discrete_brownian_bridge(shore: Shore) -> None:
     assert sines(found.coefficients.T / found.values, exact).max() < 1e-11
 
 
-def test_first_difference(shore: Shore) -> None:
+def test_a4c_first_difference(shore: Shore) -> None:
     # n x (n+1), rows (-1, 1): sigma_k = 2 sin(k pi / (2(n+1))), right vectors DCT-II, left vectors sines: Strang,
     # SIAM Review 41 (1999) 135 [M]. Every row sums to zero, so removing the mean changes nothing.
     n = 12
@@ -114,7 +119,7 @@ def test_first_difference(shore: Shore) -> None:
 
 
 @pytest.mark.parametrize("orient", ["channels_by_samples", "samples_by_channels"])
-def test_rank_three_leaves_blanks(shore: Shore, orient: str) -> None:
+def test_a9_rank_three_leaves_blanks(shore: Shore, orient: str) -> None:
     # 8 x 5, singular values sqrt(1248), 20, sqrt(384), 0, 0: Golub and Reinsch, Numer. Math. 14 (1970) 403 [M].
     numbers = np.array(
         [
@@ -146,7 +151,7 @@ def test_rank_three_leaves_blanks(shore: Shore, orient: str) -> None:
     assert all(np.isfinite(rebuilt.column(f"ch{place:05d}").to_numpy()).all() for place in range(len(matrix)))
 
 
-def test_simply_supported_beam(shore: Shore) -> None:
+def test_a11f_simply_supported_beam(shore: Shore) -> None:
     # Shapes sin(m pi j/(n+1)) at equispaced inner points are exactly orthogonal (DST-I) [M]; natural frequencies of an
     # Euler-Bernoulli beam go with m^2. Whole periods of three of them are orthogonal in time.
     points, samples, cycles = 20, 2000, np.array([50, 200, 450])
@@ -181,7 +186,7 @@ def cantilever(x: np.ndarray) -> np.ndarray:
     ("sensors", "expected"),
     [(8, [0.999998, 0.99967, 0.9979]), (16, [1, 0.99998, 0.99988])],
 )
-def test_cantilever(shore: Shore, sensors: int, expected: list[float]) -> None:
+def test_a12c_cantilever(shore: Shore, sensors: int, expected: list[float]) -> None:
     # Sampled shapes are only nearly orthogonal, so modes of largest variance are only nearly natural ones; sensors in
     # the middle of equal lengths do best. Expected figures were computed for amplitudes 1, 0.3, 0.1.
     samples = 600
@@ -205,10 +210,10 @@ def wave(points: int, samples: int, waves: int, cycles: int, backwards: float) -
 
 @pytest.mark.parametrize(
     ("points", "design", "reads", "backwards"),
-    [(48, {}, 1, 0.0), (240, {"width": 12}, 1, 0.5), (240, {"width": 12}, 2, 0.0)],
+    [(48, {"summary": "whole"}, 1, 0.0), (240, {"width": 12}, 1, 0.5), (240, {"width": 12}, 2, 0.0)],
     ids=["identity", "one-read", "two-reads"],
 )
-def test_travelling_wave(shore: Shore, points: int, design: dict[str, Any], reads: int, backwards: float) -> None:
+def test_a13_travelling_wave(shore: Shore, points: int, design: dict[str, Any], reads: int, backwards: float) -> None:
     # A to the right and B to the left: sqrt(nx nt)/2 (A + B) and |A - B|, by a trigonometric identity; see Feeny,
     # J. Sound Vib. 310 (2008) 24 [M]. With B = 0 the two are equal and only their plane is defined.
     samples, waves = 320, 3

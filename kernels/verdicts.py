@@ -1,0 +1,398 @@
+"""What may be said of each mode against a tolerance, how many modes to keep, and whether to read again.
+
+Bounds, sampling angles, groups, noise and predictions come in as plain arrays; enums and figures go out, and a figure
+that is not known is ``None``, so that nothing is printed for it. No angle is computed here, and no sentence is made.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from enum import Enum
+
+import numpy as np
+from numpy.typing import NDArray
+
+from .checks import require_between, require_shape
+from .remedy import Predictions
+
+Floats = NDArray[np.float64]
+Flags = NDArray[np.bool_]
+Numbers = NDArray[np.integer]
+
+SHARE_TOLERANCE = 1e-12  # an energy share this close below what was asked counts as reached
+WORTH_READING = 0.9  # of the present bound that a prediction must beat
+HOPELESS_DEGREES = 60.0  # a predicted angle above promises no bound where there is none
+
+
+class Verdict(Enum):
+    """What may be said of a mode, in the order in which it is asked; the first that applies counts."""
+
+    AT_NOISE = "at noise"
+    WEAK = "weak"
+    CLOSE_GROUP = "close group"
+    UNRESOLVED = "unresolved"
+    SHORT_DATA = "short data"
+    RESOLVED = "resolved"
+
+
+class RemedyKind(Enum):
+    """What could be done about a mode."""
+
+    NONE = "none"
+    READ = "one more read"
+    WIDER = "wider probe"
+    DATA = "more data"
+    GROUP = "treat as a group"
+
+
+@dataclass(frozen=True)
+class Remedy:
+    """What to do about a mode, in figures.
+
+    Attributes
+    ----------
+    degrees : float or None
+        Predicted angle after a read or with twice the width; of a group, the bound on its angle that holds now.
+    at_least : bool
+        The prediction only says: at least this good.
+    factor : float or None
+        How many times the present measurement is needed, about.
+    within : bool or None
+        Of a group only: whether its own bounds are there and within the tolerance.
+    """
+
+    kind: RemedyKind
+    degrees: float | None = None
+    at_least: bool = False
+    factor: float | None = None
+    within: bool | None = None
+
+
+@dataclass(frozen=True)
+class Judgement:
+    """The verdict on a mode and what to do about it."""
+
+    verdict: Verdict
+    remedy: Remedy
+
+
+NOTHING = Remedy(RemedyKind.NONE)
+
+
+def judge(
+    tolerance_degrees: float,
+    *,
+    sine: Floats,
+    coefficient_sine: Floats,
+    sampling_sine: Floats,
+    group: Numbers,
+    at_noise: Flags,
+    weak: Flags,
+    predictions: Predictions | None = None,
+) -> tuple[Judgement, ...]:
+    """Return the judgement of each of the leading modes.
+
+    A mode is resolved only if all three angles are known and within the tolerance: however small the other two are,
+    a missing one is never taken for a good one.
+
+    Parameters
+    ----------
+    tolerance_degrees : float
+        Above 0 and below 90.
+    sine, coefficient_sine, sampling_sine : float64 (r,)
+        Bounds on the sine of the angle of the mode (of its group for members) and of its coefficients, and the
+        sampling angle; NaN stands for none.
+    group : int (k',), k' >= r
+        Number of the group of every computed mode, never falling: a group that goes on beyond r is a group.
+    at_noise, weak : bool (r,)
+    predictions : Predictions or None
+        Of at least r modes, of the same groups; ``None`` if nothing can be gained, as with the identity probe.
+
+    """
+    limit = _sine_of(tolerance_degrees)
+    _require_alike(sine, coefficient_sine=coefficient_sine, sampling_sine=sampling_sine, at_noise=at_noise, weak=weak)
+    members = _members(group, sine.size)
+    computed = np.maximum(sine, coefficient_sine)  # NaN if either is
+    judgements = []
+    for i in range(sine.size):
+        if at_noise[i]:
+            made = Judgement(Verdict.AT_NOISE, NOTHING)
+        elif weak[i]:
+            made = Judgement(Verdict.WEAK, Remedy(RemedyKind.DATA))
+        elif members[i] > 1:
+            within = bool(computed[i] <= limit)
+            made = Judgement(Verdict.CLOSE_GROUP, Remedy(RemedyKind.GROUP, _degrees(float(sine[i])), within=within))
+        elif not computed[i] <= limit:
+            made = Judgement(Verdict.UNRESOLVED, _computation_remedy(float(computed[i]), i, limit, predictions))
+        elif not sampling_sine[i] <= limit:
+            made = Judgement(Verdict.SHORT_DATA, _data_remedy(float(sampling_sine[i]), tolerance_degrees))
+        else:
+            made = Judgement(Verdict.RESOLVED, NOTHING)
+        judgements.append(made)
+    return tuple(judgements)
+
+
+class RankReason(Enum):
+    """Why a rank is what it is."""
+
+    ASKED = "as asked"
+    GROUP_WHOLE = "a close group is kept whole"
+    GROUP_OPEN = "a close group is cut, because it reaches the last computed mode"
+    FEWER_MODES = "fewer modes were computed"
+    SHARE_REACHED = "the share is reached"
+    SHARE_NOT_REACHED = "all computed modes hold less than the share"
+    WITHIN_ANGLE = "the leading modes within the angle"
+    NOT_WITHIN_ANGLE = "not even the first mode is within the angle"
+    ABOVE_NOISE = "the modes above the noise"
+    NONE_ABOVE_NOISE = "no mode is above the noise"
+    NO_MODES = "there are no modes"
+
+
+@dataclass(frozen=True)
+class Count:
+    """Keep so many modes."""
+
+    modes: int
+
+
+@dataclass(frozen=True)
+class Energy:
+    """Keep the fewest modes with this share of the energy, above 0 and at most 1."""
+
+    share: float
+
+
+@dataclass(frozen=True)
+class Angle:
+    """Keep the leading modes whose bound is within this angle."""
+
+    degrees: float
+
+
+@dataclass(frozen=True)
+class AboveNoise:
+    """Keep the modes above the noise, as counted before."""
+
+    modes: int
+
+
+RankRule = Count | Energy | Angle | AboveNoise
+
+
+@dataclass(frozen=True)
+class RankChoice:
+    """How many modes are kept: at least 1 if there are any; what the rule asked; whether it could be kept; why."""
+
+    rank: int
+    asked: float
+    met: bool
+    reason: RankReason
+
+
+def choose_rank(
+    rule: RankRule, *, eigenvalues: Floats, energy_total: float, sine: Floats, group: Numbers
+) -> RankChoice:
+    """Return how many modes to keep.
+
+    Parameters
+    ----------
+    rule : Count, Energy, Angle or AboveNoise
+    eigenvalues, energy_total : float64 (k',), float
+        Energy captured by each computed mode, and that of the matrix.
+    sine : float64 (k',)
+        Bound on the sine of the angle of each mode, of its group for members; NaN stands for none.
+    group : int (k',)
+        Number of the group of each mode, never falling.
+    """
+    require_shape("sine", sine, eigenvalues.shape)
+    require_shape("group", group, eigenvalues.shape)
+    _members(group, group.size)
+    match rule:
+        case Count(modes):
+            require_between("modes", modes, 1)
+            return _whole_groups(modes, modes, group)
+        case Energy(share):
+            return _energy_rank(share, eigenvalues, energy_total)
+        case Angle(degrees):
+            return _angle_rank(degrees, sine, group)
+        case AboveNoise(0):
+            return _failed(0, group, RankReason.NONE_ABOVE_NOISE)
+        case AboveNoise(modes):
+            require_between("modes", modes, 0)
+            found = _whole_groups(modes, modes, group)
+            return replace(found, reason=RankReason.ABOVE_NOISE) if found.reason is RankReason.ASKED else found
+
+
+class ReadReason(Enum):
+    """Why a campaign is read again, or not."""
+
+    HELPS = "another read helps"
+    MET = "every mode is within the tolerance"
+    EXACT = "reading again changes nothing"
+    MOST_READS = "the most reads are reached"
+    NO_GAIN = "another read is not expected to help"
+    CLOSE_GROUP = "close modes cannot be parted by reading"
+    AT_NOISE = "what is left is noise"
+
+
+@dataclass(frozen=True)
+class ReadDecision:
+    """Whether to read again, and the modes it is about, from 0: those that are helped, or that stand in the way."""
+
+    again: bool
+    reason: ReadReason
+    modes: tuple[int, ...] = ()
+
+
+def read_again(
+    tolerance_degrees: float,
+    *,
+    sine: Floats,
+    coefficient_sine: Floats,
+    group: Numbers,
+    at_noise: Flags,
+    predicted: Floats,
+    predicted_alone: Floats,
+    held_by_sampling: Flags,
+    reads: int,
+    most_reads: int,
+    exact: bool = False,
+) -> ReadDecision:
+    """Return whether one more read is worth its price for the leading modes.
+
+    A mode is helped if it is not within the tolerance and the prediction beats nine tenths of its bound (or, if it has
+    none, 60 degrees), or if it is in a group that the read is expected to part. Where a bound is missed and there is no
+    prediction the read is made: only a reason stops it.
+
+    Parameters
+    ----------
+    tolerance_degrees, sine, coefficient_sine, group, at_noise
+        As for ``judge``.
+    predicted, predicted_alone : float64 (r,)
+        Sines expected after one more read: of the mode's group, and of the mode by itself; NaN for none.
+    held_by_sampling : bool (r,)
+        Of members of a group: the samples are too few to part it, whatever is computed.
+    reads, most_reads : int
+        Reads made, and the most there may be.
+    exact : bool
+        The factorization has no error but rounding.
+    """
+    limit = _sine_of(tolerance_degrees)
+    require_between("reads", reads, 1)
+    require_between("most_reads", most_reads, 1)
+    _require_alike(sine, coefficient_sine=coefficient_sine, at_noise=at_noise, held_by_sampling=held_by_sampling)
+    _require_alike(sine, predicted=predicted, predicted_alone=predicted_alone)
+    computed = np.maximum(sine, coefficient_sine)
+    within, grouped = computed <= limit, _members(group, sine.size) > 1
+    helped = ~within & ~at_noise & _gains(computed, predicted)
+    helped |= within & grouped & ~at_noise & ~held_by_sampling & (predicted_alone <= limit)
+    if bool((within & ~grouped).all()):
+        return ReadDecision(False, ReadReason.MET)
+    if exact:
+        return ReadDecision(False, ReadReason.EXACT, _places(~within | grouped))
+    if helped.any():
+        again = reads < most_reads
+        return ReadDecision(again, ReadReason.HELPS if again else ReadReason.MOST_READS, _places(helped))
+    return _why_not(within, grouped, at_noise)
+
+
+def _why_not(within: Flags, grouped: Flags, at_noise: Flags) -> ReadDecision:
+    """Return the weightiest reason not to read for modes that no read helps."""
+    reasons = (
+        (ReadReason.NO_GAIN, ~within & ~grouped & ~at_noise),
+        (ReadReason.CLOSE_GROUP, grouped & ~at_noise),
+        (ReadReason.AT_NOISE, at_noise),
+    )
+    reason, concerned = next(pair for pair in reasons if pair[1].any())
+    return ReadDecision(False, reason, _places(concerned))
+
+
+def _gains(present: Floats, predicted: Floats) -> Flags:
+    """Return where a predicted sine is worth a read; where it is NaN, nothing speaks against one."""
+    enough = np.where(np.isnan(present), _sine_of(HOPELESS_DEGREES), WORTH_READING * np.minimum(present, 1.0))
+    return np.asarray(~(predicted > enough), dtype=np.bool_)
+
+
+def _computation_remedy(present: float, i: int, limit: float, predictions: Predictions | None) -> Remedy:
+    """Return the cheaper way that is expected to do, else the better one, else none."""
+    if predictions is None or i >= min(predictions.read.size, predictions.wider.size):
+        return NOTHING
+    ways = (
+        (RemedyKind.READ, float(predictions.read[i]), bool(predictions.read_at_least[i])),
+        (RemedyKind.WIDER, float(predictions.wider[i]), bool(predictions.wider_at_least[i])),
+    )
+    worth = [way for way in ways if bool(_gains(np.array(present), np.array(way[1]))) and not np.isnan(way[1])]
+    if not worth:
+        return NOTHING
+    kind, predicted, at_least = min(worth, key=lambda way: (way[1] > limit, way[1] if way[1] > limit else 0.0))
+    return Remedy(kind, degrees=_degrees(predicted), at_least=at_least)
+
+
+def _data_remedy(sampling: float, tolerance_degrees: float) -> Remedy:
+    """Return by how much longer to measure: sampling angles fall with the root of the samples."""
+    angle = _degrees(sampling)
+    return Remedy(RemedyKind.DATA, factor=None if angle is None else (angle / tolerance_degrees) ** 2)
+
+
+def _require_alike(sine: Floats, **arrays: Floats | Flags) -> None:
+    for name, array in arrays.items():
+        require_shape(name, array, sine.shape)
+
+
+def _degrees(sine: float) -> float | None:
+    return None if np.isnan(sine) else float(np.degrees(np.arcsin(min(sine, 1.0))))
+
+
+def _sine_of(degrees: float) -> float:
+    if not 0 < degrees < 90:
+        raise ValueError(f"degrees: must be above 0 and below 90; got {degrees}")
+    return float(np.sin(np.radians(degrees)))
+
+
+def _places(flags: Flags) -> tuple[int, ...]:
+    return tuple(int(i) for i in np.flatnonzero(flags))
+
+
+def _members(group: Numbers, count: int) -> Numbers:
+    """Return how many members the group of each of the leading modes has."""
+    if group.ndim != 1 or group.size < count or bool((np.diff(group) < 0).any()):
+        raise ValueError(f"group: must hold at least {count} numbers that never fall; got {group}")
+    _, place, sizes = np.unique(group, return_inverse=True, return_counts=True)
+    return np.asarray(sizes[place][:count])
+
+
+def _whole_groups(modes: int, asked: float, group: Numbers) -> RankChoice:
+    """Return at least so many modes with no group cut, unless the group has no known end."""
+    if modes > group.size:
+        return RankChoice(group.size, asked, False, RankReason.FEWER_MODES if group.size else RankReason.NO_MODES)
+    whole = int((group <= group[modes - 1]).sum())
+    if whole == modes:
+        return RankChoice(modes, asked, True, RankReason.ASKED)
+    if whole == group.size:
+        return RankChoice(modes, asked, True, RankReason.GROUP_OPEN)
+    return RankChoice(whole, asked, True, RankReason.GROUP_WHOLE)
+
+
+def _failed(asked: float, group: Numbers, reason: RankReason) -> RankChoice:
+    """Return the first mode, or its group, for a rule that no mode keeps."""
+    rank = _whole_groups(1, asked, group).rank
+    return RankChoice(rank, asked, False, reason if rank else RankReason.NO_MODES)
+
+
+def _energy_rank(share: float, eigenvalues: Floats, energy_total: float) -> RankChoice:
+    if not 0 < share <= 1:
+        raise ValueError(f"share: must be above 0 and at most 1; got {share}")
+    reached = np.cumsum(eigenvalues) >= (share - SHARE_TOLERANCE) * energy_total
+    if not reached.any():
+        reason = RankReason.SHARE_NOT_REACHED if eigenvalues.size else RankReason.NO_MODES
+        return RankChoice(eigenvalues.size, share, False, reason)
+    return RankChoice(1 + int(reached.argmax()), share, True, RankReason.SHARE_REACHED)
+
+
+def _angle_rank(degrees: float, sine: Floats, group: Numbers) -> RankChoice:
+    # A group counts if all of it is within; the run ends before the first that is not.
+    failed = group[~(sine <= _sine_of(degrees))]
+    run = int((group < failed.min()).sum()) if failed.size else sine.size
+    if run == 0:
+        return _failed(degrees, group, RankReason.NOT_WITHIN_ANGLE)
+    return RankChoice(run, degrees, True, RankReason.WITHIN_ANGLE)
