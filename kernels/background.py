@@ -159,13 +159,10 @@ def reduce(summary: Summary, *, keep_mean: bool = False, rows: Sequence[int] = (
     inverse, rank = _inverse_of(summary, places, keep_mean)
     weights, right = summary.outer[:, places] @ inverse, summary.inner[:, places] @ inverse
     left_products, right_products = summary.outer[:, places], summary.inner[places]
-    inner = summary.inner - right @ right_products
-    reduced = replace(
-        summary,
-        outer=summary.outer - weights @ right_products,
-        inner=(inner + inner.T) / 2,
-        energy=np.maximum(summary.energy - np.einsum("ij,ij->i", weights, left_products), 0),
-    )
+    inner, outer = summary.inner - right @ right_products, weights @ right_products
+    np.subtract(summary.outer, outer, out=outer)
+    energy = np.maximum(summary.energy - np.einsum("ij,ij->i", weights, left_products), 0)
+    reduced = replace(summary, outer=outer, inner=(inner + inner.T) / 2, energy=energy)
     return reduced, Removal(*means, tuple(rows), places, weights, right, rank, means[1][places], keep_mean)
 
 

@@ -15,7 +15,7 @@ import numpy as np
 from shardfold.design import Design
 from shardfold.errors import PlanRefused
 from shardfold.kernels.whole import Shape, stored_dtype
-from shardfold.plan import TREE_BITS, Cell
+from shardfold.plan import MOST_TERMS, TREE_BITS, Cell
 from shardfold.readers import group_peak_bytes, shard_peak_bytes
 from shardfold.summaries import bytes_of, finish_bytes, fold_bytes
 
@@ -104,7 +104,8 @@ def budget(design: Design, shape: Shape, cells: Sequence[Cell], rank: int, worke
         "coefficients": _coefficient_phase(design, shape, cells, rank),
     }
     describing = FOOTERS_AT_ONCE * max((_footer_bytes(design.layout, cell) for cell in cells), default=0)
-    driver = DRIVER_BYTES + max(describing, finish_bytes(design, shape)) + sum(map(_records_bytes, cells))
+    judging = summary + finish_bytes(design, shape) + _terms_bytes(shape, rank)
+    driver = DRIVER_BYTES + max(describing, judging) + sum(map(_records_bytes, cells))
     return Budget(phases, driver, 0 if serial else OBJECT_STORE_BYTES, workers)
 
 
@@ -159,6 +160,11 @@ def _footer_bytes(layout: str, cell: Cell) -> int:
     """Return the largest footer, of which the readers' bound counts two beside a row group."""
     shards = (piece.shard for piece in cell.pieces)
     return max((shard_peak_bytes(s, layout) - max(map(group_peak_bytes, s.groups))) // 2 for s in shards)
+
+
+def _terms_bytes(shape: Shape, rank: int) -> int:
+    """Return what the leaf terms hold: as they come, stacked, and once more while they are joined."""
+    return 3 * MOST_TERMS * rank * (shape.k + shape.q_theta) * 8
 
 
 def _records_bytes(cell: Cell) -> int:

@@ -18,13 +18,12 @@ from shardfold.design import Design
 from shardfold.kernels.background import Removal
 from shardfold.kernels.sampling import LeafTerms, join, leaf_terms
 from shardfold.kernels.whole import Shape
-from shardfold.plan import Cell, by_leaf
+from shardfold.plan import MOST_TERMS, Cell, by_leaf
 from shardfold.store import Store
 from shardfold.summaries import right_arrays_of, right_products
 
 Array = npt.NDArray[Any]
 
-MOST_TERMS = 1024
 LEAVES_A_TASK = 16
 
 

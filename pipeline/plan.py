@@ -24,6 +24,10 @@ TREE_BITS = 3
 """Each stored sum covers an aligned run of 2**3 children, summed in one task; the bits are those of the full tree."""
 
 
+MOST_TERMS = 256
+"""Leaves are joined until they are no more than so many where modes are judged leaf by leaf."""
+
+
 @dataclass(frozen=True)
 class Piece:
     """The samples of one shard version in one leaf: runs of row groups, and whether all their rows are inside."""

@@ -260,6 +260,19 @@ def test_rows_that_are_not_random_signs_are_no_checks(lab: Any) -> None:
     assert len(_left_out(primed.reduced, primed.made, primed.probe)) == 20
 
 
+@pytest.mark.parametrize("rank", [0, 1, 2])
+def test_few_modes(lab: Any, rank: int) -> None:
+    matrix = lab.with_spectrum(30, 40, np.ones(rank)) if rank else np.zeros((30, 40))
+    folded = lab.fold(matrix, 12, checks=10)
+    reduced, _ = background.reduce(folded.summary)
+    made = factors.finish(folded.summary)
+    checks = Checks(reduced.outer[:, reduced.shape.theta], folded.probe.check)
+    result = bounds(made, residuals(reduced, made, checks, folded.probe.rows), np.inf)
+    assert result.group.tolist() == [0] * rank  # an exact pair is one group
+    assert (result.sine < 1e-13).all()
+    assert result.upper.size == rank + 1
+
+
 def test_doors(lab: Any) -> None:
     judged = read(lab, lab.with_spectrum(40, 50, 1 / J[:30]), 12, 1)
     h, theta = judged.checks.h, judged.checks.theta

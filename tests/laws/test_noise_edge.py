@@ -177,7 +177,7 @@ def test_equal_channels_are_rarely_flagged_and_noise_is_rarely_a_mode() -> None:
         flagged += not found.white
         counted += found.count > 0
         exceeded += np.linalg.norm(matrix - matrix.mean(axis=1, keepdims=True), 2) > found.edge
-    assert flagged <= 2
+    assert flagged <= 4
     assert counted <= 4
     assert 5 <= exceeded <= 30
 

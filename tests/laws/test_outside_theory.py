@@ -174,15 +174,17 @@ def estimates(request: pytest.FixtureRequest, lab: Any) -> Estimates:
 def estimate(lab: Any, matrix: Floats, rows: Floats, made: factors.Factors, seed: int) -> Floats:
     """Return the squared estimates from what a summary holds.
 
-    Of ``A - U S V^T`` and of ``A A^T - U L U^T`` as wholes; then of their residuals by mode, as the kernels give them.
+    Of ``A - U S V^T`` and of ``A A^T - U L U^T`` as wholes; then of their residuals by mode, right ones as the kernels
+    give them.
     """
     folded = lab.fold(matrix, K, rows=rows, checks=CHECKS, seed=seed)
     summary, shape = folded.summary, folded.summary.shape
     f, h = summary.outer[:, shape.xi], summary.outer[:, shape.theta]
     whole = np.sum((f - made.modes @ made.row_map @ summary.inner[shape.x, shape.xi]) ** 2) / CHECKS
-    gram = np.sum((h - (made.modes * made.values**2) @ (folded.probe.check @ made.modes).T) ** 2) / CHECKS
+    remainder = h - (made.modes * made.values**2) @ (folded.probe.check @ made.modes).T
     found = bounds.residuals(background.reduce(summary)[0], made, bounds.Checks(h, folded.probe.check))
-    return np.concatenate([[whole, gram], found.right_estimate**2, found.left**2 * QUANTILE])
+    left = np.sum((remainder.T @ made.modes) ** 2, axis=0) / CHECKS
+    return np.concatenate([[whole, np.sum(remainder**2) / CHECKS], found.right_estimate**2, left])
 
 
 def assert_law(error: Floats, squared: Floats) -> None:

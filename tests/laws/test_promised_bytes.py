@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 import pytest
 
-from shardfold.kernels import cost, factors
+from shardfold.kernels import background, bounds, cost, factors
 from shardfold.kernels.blocks import Preparation
 from shardfold.kernels.whole import Probe, Shape, fold_block, merge, stored_dtype, to_arrays, zero
 
@@ -72,8 +72,24 @@ def test_summary_merge_and_finish(m: int, k: int | None) -> None:
     assert stored == cost.summary_bytes(summary.shape)
     measured = peak_bytes(lambda: merge(summary, summary))
     assert measured <= cost.merge_bytes(summary.shape) <= 2 * measured
-    measured = peak_bytes(lambda: factors.finish(summary, keep_mean=True))
-    assert measured <= cost.finish_bytes(summary.shape) <= 2 * measured
+    for rows in ((), (0,)):
+        measured = peak_bytes(lambda rows=rows: factors.finish(summary, keep_mean=True, rows=rows))
+        assert measured <= cost.finish_bytes(summary.shape) <= 2 * measured
+
+
+@pytest.mark.parametrize(("m", "k"), [(4000, 64), (1000, 200)])
+def test_judging_stays_below_the_finish(m: int, k: int) -> None:
+    arguments = ready(m, 300, k, "float64", "C")
+    summary, theta = arguments[0], arguments[3].check
+    fold_block(*arguments)
+    made = factors.finish(summary)
+    reduced, _ = background.reduce(summary)
+
+    def judge() -> bounds.Residuals:
+        checks = bounds.Checks(reduced.outer[:, reduced.shape.theta], theta)
+        return bounds.residuals(reduced, made, checks, arguments[3].rows.astype(np.float32))
+
+    assert peak_bytes(judge) <= cost.finish_bytes(summary.shape) - made.modes.nbytes
 
 
 def test_coefficients() -> None:

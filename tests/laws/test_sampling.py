@@ -112,7 +112,7 @@ def test_what_is_outside_is_seen_through_the_check_probe() -> None:
         np.testing.assert_allclose(np.mean(terms.outside**2, axis=0), expected, rtol=0.25)
 
 
-def coverage(rho: float, leaves: int, length: int, repeats: int = 100) -> np.ndarray:
+def coverage(rho: float, leaves: int, length: int, repeats: int = 80) -> np.ndarray:
     """Return how often each mode's angle is kept."""
     kept = []
     for seed in range(repeats):
@@ -122,12 +122,12 @@ def coverage(rho: float, leaves: int, length: int, repeats: int = 100) -> np.nda
     return np.mean(kept, axis=0)
 
 
-@pytest.mark.parametrize(("rho", "leaves", "length"), [(0.0, 16, 50), (0.9, 32, 60), (0.98, 32, 200)])
+@pytest.mark.parametrize(("rho", "leaves", "length"), [(0.0, 16, 50), (0.9, 24, 80), (0.98, 16, 400)])
 def test_nine_campaigns_in_ten_keep_the_angle(rho: float, leaves: int, length: int) -> None:
-    # 100 campaigns: a mode that is covered with 90 % lies between 81 and 98 % but once in some hundred.
+    # 80 campaigns: a mode that is covered with 90 % is seen to be with 80 to 98 % but once in some hundred.
     share = coverage(rho, leaves, length)
     assert share.mean() == pytest.approx(0.9, abs=0.04)
-    assert share.min() >= 0.81
+    assert share.min() >= 0.8
     assert share.max() <= 0.98
 
 
@@ -139,7 +139,7 @@ def test_nine_noisy_campaigns_in_ten_keep_the_angle() -> None:
         matrix = rng(1000 + seed).standard_normal((m, n))
         matrix[:4] += size[:, np.newaxis] * ar1(rng(seed), 0.6, 4, n)
         left = np.linalg.svd(matrix - matrix.mean(axis=1, keepdims=True), full_matrices=False)[0]
-        found = read(matrix, 32, rows=np.vstack([left[:, :24].T, np.eye(10, m, 100)]))
+        found = read(matrix, 20, rows=np.vstack([left[:, :24].T, np.eye(10, m, 100)]))
         made = found.made
         noise = noise_edge(made.values, np.zeros(made.values.size), made.energy, m, n, 1)
         assert noise is not None
