@@ -177,7 +177,7 @@ def mode_rows(result: Result) -> list[list[str]]:
                 str(row["mode"]),
                 f"{100 * share:.3f}" if held else "under floor",
                 "-" if total is None else f"{100 * total:.3f}",
-                _bound(row["angle_bound_deg"]) if held else "-",
+                _bound(row["angle_bound_deg"]) if held and row["verdict"] != "at noise" else "-",
                 _least(row["mac_at_least"]),
                 _sampling(row["sampling_angle_deg"]),
                 row["group"] or "-",
