@@ -137,9 +137,9 @@ def assess(site: Site, intake: Intake, done: Pass) -> Assessment:
         samples = told.n_effective if np.isfinite(told.n_effective) else float(factors.n)
         found = bounds(factors, left, samples)
         told = sampling(terms, factors, noise, found.group)
-        predictions = _predictions(done, factors, left, checks)
+        ahead = _predictions(done, factors, left, checks, found.group)
     choice = _choice(modes.rank, design.most_modes(modes.rank), factors, found, noise)
-    return _judged(site, done, summary, factors, found, told, noise, choice, predictions, samples)
+    return _judged(site, done, summary, factors, found, told, noise, choice, ahead, samples)
 
 
 def sum_of(site: Site, intake: Intake, done: Pass) -> AnySummary:
@@ -194,7 +194,17 @@ def _leaf_terms(
     return [terms for number in sorted(taken) for terms in taken[number].terms]
 
 
-def _predictions(done: Pass, factors: Factors, left: Residuals, checks: Checks | None) -> Predictions | None:
+@dataclass(frozen=True)
+class _Ahead:
+    """What more effort is expected to bring: for groups as one, and for each mode by itself."""
+
+    grouped: Predictions
+    alone: Predictions
+
+
+def _predictions(
+    done: Pass, factors: Factors, left: Residuals, checks: Checks | None, group: Array
+) -> _Ahead | None:
     if checks is None:
         return None
     rank, k = min(factors.values.size, done.shape.k), done.shape.k
@@ -210,7 +220,8 @@ def _predictions(done: Pass, factors: Factors, left: Residuals, checks: Checks |
         reads=done.read,
         floor=factors.floor,
     )
-    return predict(spectrum, head, fresh_rows(k, min(rank, k // 3)))
+    fresh = fresh_rows(k, min(rank, k // 3))
+    return _Ahead(predict(spectrum, head, fresh, group), predict(spectrum, head, fresh))
 
 
 def _choice(
@@ -247,7 +258,7 @@ def _judged(
     told: Sampling,
     noise: NoiseEdge | None,
     choice: RankChoice,
-    predictions: Predictions | None,
+    ahead: _Ahead | None,
     samples: float,
 ) -> Assessment:
     modes, rank = site.job.modes, choice.rank
@@ -261,17 +272,17 @@ def _judged(
         group=found.group,
         at_noise=noisy,
         weak=weak.astype(bool),
-        predictions=predictions,
+        predictions=None if ahead is None else ahead.grouped,
     )
-    ahead = np.full(rank, np.nan) if predictions is None else padded(predictions.read, rank)
+    nothing = np.full(rank, np.nan)
     decision = read_again(
         modes.rank.angle_deg if isinstance(modes.rank, AngleRank) else modes.tolerance_deg,
         sine=found.sine[:rank],
         coefficient_sine=found.coefficient_sine[:rank],
         group=found.group,
         at_noise=noisy,
-        predicted=ahead,
-        predicted_alone=ahead,
+        predicted=nothing if ahead is None else padded(ahead.grouped.read, rank),
+        predicted_alone=nothing if ahead is None else padded(ahead.alone.read, rank),
         held_by_sampling=_held_together(factors.values**2, found.group, samples)[:rank],
         reads=done.read,
         most_reads=MOST_READS,

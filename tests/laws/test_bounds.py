@@ -14,7 +14,8 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from shardfold.kernels import background, factors
+from shardfold.kernels import background, exact, factors
+from shardfold.kernels.blocks import Preparation
 from shardfold.kernels.bounds import Bounds, Checks, Residuals, _left_out, bounds, residuals
 from shardfold.kernels.comoments import Summary
 
@@ -79,7 +80,7 @@ def with_pairs(ratio: float) -> np.ndarray:
 @pytest.mark.parametrize(
     ("values", "share", "medians"),
     # Limits: share of the first 8 modes with a bound, medians of bound over truth; by reads.
-    [(1 / J, (0.5, 0.95), (5, 3)), (J**-2, (0.9, 1), (5, 3)), (with_pairs(1.01), (0.4, 0.9), (6, 3))],
+    [(1 / J, (0.5, 0.95), (5, 3)), (J**-2, (0.9, 1), (5, 4)), (with_pairs(1.01), (0.4, 0.9), (6, 3))],
     ids=["1/j", "1/j^2", "pairs 1.01"],
 )
 def test_a_small_study(
@@ -188,6 +189,20 @@ def test_the_identity_probe_leaves_rounding_alone(lab: Any) -> None:
     assert result.group[:4].tolist() == [0, 1, 1, 2]
     assert 0 < result.sine[:4].max() < 1e-12
     assert 0 < result.coefficient_sine[:4].max() < 1e-12
+
+
+def test_the_exact_summary_leaves_its_own_rounding(lab: Any) -> None:
+    values = np.array([1, 0.9, 1e-3, 1e-6, 1e-9])
+    rng = np.random.Generator(np.random.PCG64(8))
+    u, v = (np.linalg.qr(rng.standard_normal((size, 5)))[0] for size in (30, 90))
+    matrix = (u * values) @ v.T
+    triangle = exact.zero(exact.shape_of(30, 0))
+    exact.fold_block(triangle, matrix, Preparation.unit(30), np.empty((0, 90)))
+    made = exact.finish(triangle, keep_mean=True)
+    nothing, floor = np.zeros(made.values.size), made.floor**2
+    result = bounds(made, Residuals(nothing, nothing, nothing, floor, floor), np.inf)
+    for i, limit in enumerate([1e-13, 1e-13, 1e-10, 1e-7, 1e-4]):
+        assert turned(made.modes, u, slice(i, i + 1)) <= result.sine[i] < limit
 
 
 def test_where_nothing_can_be_said_there_is_no_bound(lab: Any) -> None:
