@@ -14,6 +14,7 @@ from shardfold.assess import Assessment, padded
 from shardfold.kernels.verdicts import RankReason, ReadReason, Remedy, RemedyKind, Verdict
 from shardfold.quantities import format_angle
 
+NOISE_REASONS = (RankReason.ABOVE_NOISE, RankReason.NONE_ABOVE_NOISE)
 MOST_QUOTED = 100.0
 """A campaign longer than so many times the present one is not quoted: angles that large only say it is too short."""
 
@@ -57,7 +58,8 @@ def next_step(judged: Assessment) -> str:
 def reading_words(judged: Assessment) -> str:
     """Return why the campaign is read again, or why not, in a line."""
     decision = judged.decision
-    concerned = f" (modes {_ranges([i + 1 for i in decision.modes])})" if decision.modes else ""
+    modes = "mode" if len(decision.modes) == 1 else "modes"
+    concerned = f" ({modes} {_ranges([i + 1 for i in decision.modes])})" if decision.modes else ""
     if decision.reason is ReadReason.HELPS:
         return f"the tolerance is not met and another read is expected to help{concerned}"
     return f"{decision.reason.value}{concerned}"
@@ -157,9 +159,11 @@ def _remedy_of_all(judged: Assessment, concerned: list[int]) -> str:
 
 
 def _rank_remarks(judged: Assessment) -> list[str]:
-    choice = judged.choice
+    choice, more = judged.choice, judged.modes_after_a_read
     if judged.held and not judged.told[-1]:
         return []
+    if choice.reason is RankReason.WITHIN_ANGLE and more > choice.rank:
+        return [f"one more read is expected to bring {more} modes within {format_angle(choice.asked)}"]
     if choice.reason in (RankReason.GROUP_WHOLE, RankReason.GROUP_OPEN, RankReason.FEWER_MODES) or not choice.met:
         return [f"{choice.rank} modes: {choice.reason.value}"]
     return []
@@ -167,7 +171,8 @@ def _rank_remarks(judged: Assessment) -> list[str]:
 
 def _noise_remarks(judged: Assessment) -> list[str]:
     removal, remarks = judged.factors.removal, []
-    if judged.noise is not None and judged.noise.white is False:
+    doubtful = judged.noise is not None and judged.noise.white is False
+    if doubtful and (not judged.told.all() or judged.choice.reason in NOISE_REASONS):
         remarks.append("what is left differs between channels, so the noise edge is a guess (channel_summary.parquet)")
     if removal.rank < len(removal.rows):
         remarks.append(
@@ -178,6 +183,8 @@ def _noise_remarks(judged: Assessment) -> list[str]:
 
 
 def _count(good: int, count: int) -> str:
+    if count == 1:
+        return "the mode is" if good else "the mode is not"
     return f"all {count} modes are" if good == count else f"{good} of {count} modes {'is' if good == 1 else 'are'}"
 
 

@@ -69,6 +69,8 @@ class Assessment:
     asked : int or None
         Number of modes asked for, if a number was.
     tolerance_deg : float
+    modes_after_a_read : int
+        Leading modes expected within the angle asked for if the campaign is read once more; 0 without such a rule.
     """
 
     summary: AnySummary
@@ -81,6 +83,7 @@ class Assessment:
     decision: ReadDecision
     asked: int | None
     tolerance_deg: float
+    modes_after_a_read: int
 
     @property
     def held(self) -> int:
@@ -289,9 +292,18 @@ def _judged(
         exact=done.shape.identity,
     )
     asked = modes.rank if isinstance(modes.rank, int) else None
+    more = _run_within(modes.rank.angle_deg, ahead) if isinstance(modes.rank, AngleRank) else 0
     return Assessment(
-        summary, factors, found, told, noise, choice, judgements, decision, asked, modes.tolerance_deg
+        summary, factors, found, told, noise, choice, judgements, decision, asked, modes.tolerance_deg, more
     )
+
+
+def _run_within(degrees: float, ahead: _Ahead | None) -> int:
+    """Return how many leading modes are expected within an angle after one more read."""
+    if ahead is None:
+        return 0
+    failed = ~(ahead.grouped.read <= np.sin(np.radians(degrees)))
+    return int(failed.argmax()) if failed.any() else failed.size
 
 
 def _held_together(squares: Array, group: Array, samples: float) -> Array:
