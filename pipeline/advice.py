@@ -76,7 +76,7 @@ def record(judged: Assessment) -> dict[str, Any]:
         "removed": removed_words(judged),
         "background": {"functions": len(removal.rows), "independent": removal.rank},
         "effective_samples": _known(sampled.n_effective),
-        "leaves": {"judged": sampled.leaves, "joined": sampled.joined},
+        "leaves": {"all": judged.leaves, "independent": sampled.leaves},
         "noise": None if noise is None else {
             "modes_above": noise.count,
             "standard_deviation": math.sqrt(noise.variance),

@@ -43,6 +43,7 @@ from shardfold.kernels.verdicts import (
 )
 from shardfold.kernels.whole import Summary
 from shardfold.leaf_terms import TermsTaken, mode_map, terms_tasks
+from shardfold.plan import by_leaf
 from shardfold.site import Site
 from shardfold.summaries import AnySummary, finish
 from shardfold.sums import add_all
@@ -69,6 +70,8 @@ class Assessment:
     asked : int or None
         Number of modes asked for, if a number was.
     tolerance_deg : float
+    leaves : int
+        Leaves of the campaign; the sampling is judged by fewer where neighbours had to be joined.
     modes_after_a_read : int
         Leading modes expected within the angle asked for if the campaign is read once more; 0 without such a rule.
     """
@@ -83,6 +86,7 @@ class Assessment:
     decision: ReadDecision
     asked: int | None
     tolerance_deg: float
+    leaves: int
     modes_after_a_read: int
 
     @property
@@ -293,8 +297,9 @@ def _judged(
     )
     asked = modes.rank if isinstance(modes.rank, int) else None
     more = _run_within(modes.rank.angle_deg, ahead) if isinstance(modes.rank, AngleRank) else 0
+    leaves = len(by_leaf(done.cells))
     return Assessment(
-        summary, factors, found, told, noise, choice, judgements, decision, asked, modes.tolerance_deg, more
+        summary, factors, found, told, noise, choice, judgements, decision, asked, modes.tolerance_deg, leaves, more
     )
 
 

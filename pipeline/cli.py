@@ -222,6 +222,7 @@ def _print_report(report: Report, job: Job, quiet: bool) -> None:
             f"{q['modes']} modes hold {100 * q['captured_fraction']:.4f} % of the energy of "
             f"{q['samples']:,} samples of {q['channels']:,} channels"
         )
+        click.echo(q["next"])
     click.echo(report.location)
     if report.standing_refused:
         click.echo(f"shards refused before and still: {report.standing_refused}", err=True)
