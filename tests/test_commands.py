@@ -59,7 +59,7 @@ def test_run_prints_where_the_result_is_and_logs_elsewhere(desk: Desk) -> None:
     assert answer.status == 0
     *summary, location = answer.out.splitlines()
     assert Path(location).joinpath("manifest.json").exists()
-    assert [line.split()[1:] for line in summary][0][:2] == ["modes", "hold"]
+    assert summary[0].split()[1:3] == ["modes", "hold"]
     assert summary[1].startswith("0 of 3 modes are resolved within 5 deg; short data: 1-3 (")
     answer.says("campaign: 4 shards", "read: 4 done", "ledger 1", "coefficients: 4 done")
     again = desk.run()

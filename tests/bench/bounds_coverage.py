@@ -1,7 +1,7 @@
 """Print how often the bounds of ``kernels/bounds.py`` hold, and how far they are from the truth.
 
-    python tests/bench/bounds_coverage.py            about ten minutes
-    python tests/bench/bounds_coverage.py --quick    one minute
+    python tests/bench/bounds_coverage.py            about four minutes
+    python tests/bench/bounds_coverage.py --quick    a quarter of a minute
 
 A dossier is one matrix of known spectrum and one set of random rows, read one to three times; r is 1 to 20 and k is
 r + 1 to 5 r. The truth is LAPACK's decomposition of the whole matrix, groups of modes compared as subspaces. A row of
