@@ -10,7 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, fields
-from typing import Any
+from typing import Any, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,6 +18,7 @@ from numpy.typing import NDArray
 from .checks import require_shape
 
 Floats = NDArray[np.float64]
+AnySummary = TypeVar("AnySummary", bound=Any)
 
 
 @dataclass(frozen=True)
@@ -146,7 +147,7 @@ def advance(a: Summary, n: int, mean: Floats, right_mean: Floats, low: Floats, h
 def merge(a: Summary, b: Summary) -> Summary:
     """Return the summary of the samples of both; neither is changed. See ``merge_into``."""
     total = Summary(**{f.name: getattr(a, f.name) for f in fields(Summary)})
-    for name in _ARRAYS:
+    for name in _names(a):
         setattr(total, name, getattr(a, name).copy())
     merge_into(total, b)
     return total
@@ -187,7 +188,7 @@ def keep_mean(summary: Summary) -> Summary:
 
 def to_arrays(summary: Summary) -> dict[str, NDArray[Any]]:
     """Return the content by name, for storage; nothing is copied but ``n``."""
-    return {"n": np.array(summary.n, dtype=np.int64)} | {name: getattr(summary, name) for name in _ARRAYS}
+    return content(summary)
 
 
 def from_arrays(shape: Shape, arrays: Mapping[str, NDArray[Any]]) -> Summary:
@@ -198,21 +199,38 @@ def from_arrays(shape: Shape, arrays: Mapping[str, NDArray[Any]]) -> Summary:
     ValueError
         An array is missing, or has another shape or type than ``shape`` asks for.
     """
-    summary = zero(shape)
-    missing = sorted({"n", *_ARRAYS} - set(arrays))
+    return filled(zero(shape), arrays)
+
+
+def content(summary: Any) -> dict[str, NDArray[Any]]:
+    """Return the arrays of a summary of any kind by name, and ``n`` among them."""
+    return {"n": np.array(summary.n, dtype=np.int64)} | {name: getattr(summary, name) for name in _names(summary)}
+
+
+def filled(empty: AnySummary, arrays: Mapping[str, NDArray[Any]]) -> AnySummary:
+    """Return a summary of no samples, of any kind, with what was stored copied into it; the inverse of ``content``.
+
+    Raises
+    ------
+    ValueError
+        An array is missing, or has another shape or type than that of ``empty``.
+    """
+    names = _names(empty)
+    missing = sorted({"n", *names} - set(arrays))
     if missing:
-        raise ValueError(f"arrays: must hold n, {', '.join(_ARRAYS)}; got no {', '.join(missing)}")
-    for name in _ARRAYS:
-        own = getattr(summary, name)
+        raise ValueError(f"arrays: must hold n, {', '.join(names)}; got no {', '.join(missing)}")
+    for name in names:
+        own = getattr(empty, name)
         require_shape(name, arrays[name], own.shape)
         if arrays[name].dtype != own.dtype:
             raise ValueError(f"{name}: must have dtype {own.dtype}; got {arrays[name].dtype}")
         own[...] = arrays[name]
-    summary.n = int(arrays["n"])
-    return summary
+    empty.n = int(arrays["n"])
+    return empty
 
 
-_ARRAYS = tuple(f.name for f in fields(Summary) if f.name not in ("shape", "n"))
+def _names(summary: Any) -> tuple[str, ...]:
+    return tuple(f.name for f in fields(summary) if f.name not in ("shape", "n"))
 
 
 def _add_sample(a: Summary, w: float, d: Floats, d_right: Floats) -> None:

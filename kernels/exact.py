@@ -11,7 +11,7 @@ are: nothing here repairs a bad value, and nothing is said about how accurate a 
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, fields, replace
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -22,7 +22,7 @@ from scipy.linalg.lapack import dtpqrt
 from .background import RANK_TOLERANCE, Removal
 from .blocks import Preparation
 from .checks import require_between, require_block, require_finite, require_shape
-from .comoments import Shape, Summary, merge_weight
+from .comoments import Shape, Summary, content, filled, merge_weight
 from .factors import EPS, Factors, orient
 
 Floats = NDArray[np.float64]
@@ -137,7 +137,7 @@ def fold_block(triangle: Triangle, raw: NDArray[Any], preparation: Preparation, 
 
 def merge(a: Triangle, b: Triangle) -> Triangle:
     """Return the summary of the samples of both; neither is changed. See ``merge_into``."""
-    total = replace(a, **{name: getattr(a, name).copy() for name in _ARRAYS})
+    total = filled(zero(a.shape), content(a))
     merge_into(total, b)
     return total
 
@@ -179,7 +179,7 @@ def keep_mean(triangle: Triangle) -> Triangle:
 
 def to_arrays(triangle: Triangle) -> dict[str, NDArray[Any]]:
     """Return the content by name, for storage; nothing is copied but ``n``."""
-    return {"n": np.array(triangle.n, dtype=np.int64)} | {name: getattr(triangle, name) for name in _ARRAYS}
+    return content(triangle)
 
 
 def from_arrays(shape: Shape, arrays: Mapping[str, NDArray[Any]]) -> Triangle:
@@ -190,21 +190,7 @@ def from_arrays(shape: Shape, arrays: Mapping[str, NDArray[Any]]) -> Triangle:
     ValueError
         An array is missing, or has another shape or type than ``shape`` asks for.
     """
-    triangle = zero(shape)
-    missing = sorted({"n", *_ARRAYS} - set(arrays))
-    if missing:
-        raise ValueError(f"arrays: must hold n, {', '.join(_ARRAYS)}; got no {', '.join(missing)}")
-    for name in _ARRAYS:
-        own = getattr(triangle, name)
-        require_shape(name, arrays[name], own.shape)
-        if arrays[name].dtype != own.dtype:
-            raise ValueError(f"{name}: must have dtype {own.dtype}; got {arrays[name].dtype}")
-        own[...] = arrays[name]
-    triangle.n = int(arrays["n"])
-    return triangle
-
-
-_ARRAYS = tuple(f.name for f in fields(Triangle) if f.name not in ("shape", "n"))
+    return filled(zero(shape), arrays)
 
 
 def moments(triangle: Triangle) -> Summary:

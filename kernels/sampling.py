@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import special
 
-from .addressed import normals
+from .addressed import STREAM_QUANTILE, normals
 from .checks import require_between, require_shape
 from .comoments import Shape
 from .factors import Factors
@@ -24,7 +24,6 @@ Floats = NDArray[np.float64]
 
 LEVEL = 0.9  # of the sampling angle
 DRAWS = 2000
-STREAM_QUANTILE = 4
 LEAST_LEAVES = 8
 LEAST_TO_JOIN = 24
 FAINT_CORRELATION = 0.05  # leaves less correlated than this count as independent

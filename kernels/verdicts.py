@@ -1,4 +1,4 @@
-"""What may be said of each mode against a tolerance, how many modes to keep, and whether to read again.
+"""What may be said of each mode against a tolerance, what would help, and whether to read again.
 
 Bounds, sampling angles, groups, noise and predictions come in as plain arrays; enums and figures go out, and a figure
 that is not known is ``None``, so that nothing is printed for it. No angle is computed here, and no sentence is made.
@@ -6,7 +6,7 @@ that is not known is ``None``, so that nothing is printed for it. No angle is co
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from enum import Enum
 
 import numpy as np
@@ -19,7 +19,6 @@ Floats = NDArray[np.float64]
 Flags = NDArray[np.bool_]
 Numbers = NDArray[np.integer]
 
-SHARE_TOLERANCE = 1e-12  # an energy share this close below what was asked counts as reached
 WORTH_READING = 0.9  # of the present bound that a prediction must beat
 HOPELESS_DEGREES = 60.0  # a predicted angle above promises no bound where there is none
 
@@ -109,9 +108,9 @@ def judge(
         Of at least r modes, of the same groups; ``None`` if nothing can be gained, as with the identity probe.
 
     """
-    limit = _sine_of(tolerance_degrees)
+    limit = sine_of(tolerance_degrees)
     _require_alike(sine, coefficient_sine=coefficient_sine, sampling_sine=sampling_sine, at_noise=at_noise, weak=weak)
-    members = _members(group, sine.size)
+    members = members_of(group, sine.size)
     computed = np.maximum(sine, coefficient_sine)  # NaN if either is
     judgements = []
     for i in range(sine.size):
@@ -130,97 +129,6 @@ def judge(
             made = Judgement(Verdict.RESOLVED, NOTHING)
         judgements.append(made)
     return tuple(judgements)
-
-
-class RankReason(Enum):
-    """Why a rank is what it is."""
-
-    ASKED = "as asked"
-    GROUP_WHOLE = "a close group is kept whole"
-    GROUP_OPEN = "a close group is cut, because it reaches the last computed mode"
-    FEWER_MODES = "fewer modes were computed"
-    SHARE_REACHED = "the share is reached"
-    SHARE_NOT_REACHED = "all computed modes hold less than the share"
-    WITHIN_ANGLE = "the leading modes within the angle"
-    NOT_WITHIN_ANGLE = "not even the first mode is within the angle"
-    ABOVE_NOISE = "the modes above the noise"
-    NONE_ABOVE_NOISE = "no mode is above the noise"
-    NO_MODES = "there are no modes"
-
-
-@dataclass(frozen=True)
-class Count:
-    """Keep so many modes."""
-
-    modes: int
-
-
-@dataclass(frozen=True)
-class Energy:
-    """Keep the fewest modes with this share of the energy, above 0 and at most 1."""
-
-    share: float
-
-
-@dataclass(frozen=True)
-class Angle:
-    """Keep the leading modes whose bound is within this angle."""
-
-    degrees: float
-
-
-@dataclass(frozen=True)
-class AboveNoise:
-    """Keep the modes above the noise, as counted before."""
-
-    modes: int
-
-
-RankRule = Count | Energy | Angle | AboveNoise
-
-
-@dataclass(frozen=True)
-class RankChoice:
-    """How many modes are kept: at least 1 if there are any; what the rule asked; whether it could be kept; why."""
-
-    rank: int
-    asked: float
-    met: bool
-    reason: RankReason
-
-
-def choose_rank(
-    rule: RankRule, *, eigenvalues: Floats, energy_total: float, sine: Floats, group: Numbers
-) -> RankChoice:
-    """Return how many modes to keep.
-
-    Parameters
-    ----------
-    rule : Count, Energy, Angle or AboveNoise
-    eigenvalues, energy_total : float64 (k',), float
-        Energy captured by each computed mode, and that of the matrix.
-    sine : float64 (k',)
-        Bound on the sine of the angle of each mode, of its group for members; NaN stands for none.
-    group : int (k',)
-        Number of the group of each mode, never falling.
-    """
-    require_shape("sine", sine, eigenvalues.shape)
-    require_shape("group", group, eigenvalues.shape)
-    _members(group, group.size)
-    match rule:
-        case Count(modes):
-            require_between("modes", modes, 1)
-            return _whole_groups(modes, modes, group)
-        case Energy(share):
-            return _energy_rank(share, eigenvalues, energy_total)
-        case Angle(degrees):
-            return _angle_rank(degrees, sine, group)
-        case AboveNoise(0):
-            return _failed(0, group, RankReason.NONE_ABOVE_NOISE)
-        case AboveNoise(modes):
-            require_between("modes", modes, 0)
-            found = _whole_groups(modes, modes, group)
-            return replace(found, reason=RankReason.ABOVE_NOISE) if found.reason is RankReason.ASKED else found
 
 
 class ReadReason(Enum):
@@ -277,13 +185,13 @@ def read_again(
     exact : bool
         The factorization has no error but rounding.
     """
-    limit = _sine_of(tolerance_degrees)
+    limit = sine_of(tolerance_degrees)
     require_between("reads", reads, 1)
     require_between("most_reads", most_reads, 1)
     _require_alike(sine, coefficient_sine=coefficient_sine, at_noise=at_noise, held_by_sampling=held_by_sampling)
     _require_alike(sine, predicted=predicted, predicted_alone=predicted_alone)
     computed = np.maximum(sine, coefficient_sine)
-    within, grouped = computed <= limit, _members(group, sine.size) > 1
+    within, grouped = computed <= limit, members_of(group, sine.size) > 1
     helped = ~within & ~at_noise & _gains(computed, predicted)
     helped |= within & grouped & ~at_noise & ~held_by_sampling & (predicted_alone <= limit)
     if bool((within & ~grouped).all()):
@@ -309,7 +217,7 @@ def _why_not(within: Flags, grouped: Flags, at_noise: Flags) -> ReadDecision:
 
 def _gains(present: Floats, predicted: Floats) -> Flags:
     """Return where a predicted sine is worth a read; where it is NaN, nothing speaks against one."""
-    enough = np.where(np.isnan(present), _sine_of(HOPELESS_DEGREES), WORTH_READING * np.minimum(present, 1.0))
+    enough = np.where(np.isnan(present), sine_of(HOPELESS_DEGREES), WORTH_READING * np.minimum(present, 1.0))
     return np.asarray(~(predicted > enough), dtype=np.bool_)
 
 
@@ -343,7 +251,8 @@ def _degrees(sine: float) -> float | None:
     return None if np.isnan(sine) else float(np.degrees(np.arcsin(min(sine, 1.0))))
 
 
-def _sine_of(degrees: float) -> float:
+def sine_of(degrees: float) -> float:
+    """Return the sine of an angle above 0 and below 90 degrees."""
     if not 0 < degrees < 90:
         raise ValueError(f"degrees: must be above 0 and below 90; got {degrees}")
     return float(np.sin(np.radians(degrees)))
@@ -353,46 +262,15 @@ def _places(flags: Flags) -> tuple[int, ...]:
     return tuple(int(i) for i in np.flatnonzero(flags))
 
 
-def _members(group: Numbers, count: int) -> Numbers:
-    """Return how many members the group of each of the leading modes has."""
+def members_of(group: Numbers, count: int) -> Numbers:
+    """Return how many members the group of each of the leading ``count`` modes has, int (count,).
+
+    Raises
+    ------
+    ValueError
+        The numbers of groups fall somewhere, or are too few.
+    """
     if group.ndim != 1 or group.size < count or bool((np.diff(group) < 0).any()):
         raise ValueError(f"group: must hold at least {count} numbers that never fall; got {group}")
     _, place, sizes = np.unique(group, return_inverse=True, return_counts=True)
     return np.asarray(sizes[place][:count])
-
-
-def _whole_groups(modes: int, asked: float, group: Numbers) -> RankChoice:
-    """Return at least so many modes with no group cut, unless the group has no known end."""
-    if modes > group.size:
-        return RankChoice(group.size, asked, False, RankReason.FEWER_MODES if group.size else RankReason.NO_MODES)
-    whole = int((group <= group[modes - 1]).sum())
-    if whole == modes:
-        return RankChoice(modes, asked, True, RankReason.ASKED)
-    if whole == group.size:
-        return RankChoice(modes, asked, True, RankReason.GROUP_OPEN)
-    return RankChoice(whole, asked, True, RankReason.GROUP_WHOLE)
-
-
-def _failed(asked: float, group: Numbers, reason: RankReason) -> RankChoice:
-    """Return the first mode, or its group, for a rule that no mode keeps."""
-    rank = _whole_groups(1, asked, group).rank
-    return RankChoice(rank, asked, False, reason if rank else RankReason.NO_MODES)
-
-
-def _energy_rank(share: float, eigenvalues: Floats, energy_total: float) -> RankChoice:
-    if not 0 < share <= 1:
-        raise ValueError(f"share: must be above 0 and at most 1; got {share}")
-    reached = np.cumsum(eigenvalues) >= (share - SHARE_TOLERANCE) * energy_total
-    if not reached.any():
-        reason = RankReason.SHARE_NOT_REACHED if eigenvalues.size else RankReason.NO_MODES
-        return RankChoice(eigenvalues.size, share, False, reason)
-    return RankChoice(1 + int(reached.argmax()), share, True, RankReason.SHARE_REACHED)
-
-
-def _angle_rank(degrees: float, sine: Floats, group: Numbers) -> RankChoice:
-    # A group counts if all of it is within; the run ends before the first that is not.
-    failed = group[~(sine <= _sine_of(degrees))]
-    run = int((group < failed.min()).sum()) if failed.size else sine.size
-    if run == 0:
-        return _failed(degrees, group, RankReason.NOT_WITHIN_ANGLE)
-    return RankChoice(run, degrees, True, RankReason.WITHIN_ANGLE)

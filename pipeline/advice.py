@@ -11,7 +11,8 @@ from typing import Any
 import numpy as np
 
 from shardfold.assess import Assessment, padded
-from shardfold.kernels.verdicts import RankReason, ReadReason, Remedy, RemedyKind, Verdict
+from shardfold.kernels.ranks import RankReason
+from shardfold.kernels.verdicts import ReadReason, Remedy, RemedyKind, Verdict
 from shardfold.quantities import format_angle
 
 NOISE_REASONS = (RankReason.ABOVE_NOISE, RankReason.NONE_ABOVE_NOISE)

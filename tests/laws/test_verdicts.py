@@ -10,20 +10,15 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from shardfold.kernels.ranks import AboveNoise, Angle, Count, Energy, RankReason, choose_rank
 from shardfold.kernels.remedy import Predictions
 from shardfold.kernels.verdicts import (
-    AboveNoise,
-    Angle,
-    Count,
-    Energy,
     Judgement,
-    RankReason,
     ReadDecision,
     ReadReason,
     Remedy,
     RemedyKind,
     Verdict,
-    choose_rank,
     judge,
     read_again,
 )
