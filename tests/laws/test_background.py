@@ -163,3 +163,19 @@ def test_only_functions_of_the_summary_can_be_removed(lab: Any) -> None:
     matrix, g = campaign(lab, 1.0)
     with pytest.raises(ValueError, match="rows: must be between 0 and 4; got 5"):
         reduce(lab.fold(matrix, 24, background=g).summary, rows=(5,))
+
+
+@pytest.mark.parametrize("strength", [1.0, 1e3])
+def test_single_precision_costs_the_rounding_of_what_was_removed(lab: Any, strength: float) -> None:
+    matrix, g = campaign(lab, strength)
+    stored = matrix.astype(np.float32)
+    folded = lab.fold(stored, 24, cuts=[100, 333], background=g)
+    rows = (0, 1, 2, 3, 4)
+    made = factors.finish(folded.summary, rows=rows)
+    left = residual(stored.astype(np.float64), g, False, rows)
+    rounding = np.finfo(np.float32).eps * np.linalg.norm(stored - stored.mean(axis=1, keepdims=True))
+    truth = np.linalg.svd(left, compute_uv=False)
+    np.testing.assert_allclose(made.values[:3], truth[:3], atol=rounding)
+    missed = np.linalg.norm(left - made.modes[:, :3] @ folded.coefficients(made, 3, g))
+    assert missed <= np.hypot(np.sqrt((truth[3:] ** 2).sum()), 3 * rounding)
+    assert folded.blocks[0].x.dtype == np.float32
