@@ -52,6 +52,9 @@ def next_step(judged: Assessment) -> str:
         concerned = [i + 1 for i, found in enumerate(verdicts) if found is verdict]
         if concerned and verdict is not Verdict.RESOLVED:
             parts.append(f"{verdict.value}: {_ranges(concerned)}{_remedy_of_all(judged, concerned)}")
+    if judged.rank > judged.held:
+        blank = _ranges(list(range(judged.held + 1, judged.rank + 1)))
+        parts.append(f"under the rounding floor and left blank: {blank}")
     parts += _rank_remarks(judged) + _noise_remarks(judged)
     return "; ".join(parts) + "."
 

@@ -224,7 +224,8 @@ def _choice(
 ) -> RankChoice:
     """Return how many modes are published: a group whole, unless there is no room for it."""
     count = factors.values.size
-    computed = np.maximum(found.sine, found.coefficient_sine)
+    # A mode at noise is known to no angle, however well it is computed.
+    computed = np.where(at_noise(noise, count), np.nan, np.maximum(found.sine, found.coefficient_sine))
     rule = _rule(asked, count if noise is None else noise.count)
     choice = choose_rank(
         rule, eigenvalues=factors.values**2, energy_total=factors.energy_total, sine=computed, group=found.group

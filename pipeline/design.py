@@ -279,7 +279,8 @@ def _width(job: Job, channels: int) -> tuple[int, bool]:
 
 
 def _periods(cycles_ns: Sequence[int]) -> str:
-    return ", ".join(format_duration(period) for period in cycles_ns) or "none"
+    """Return cycles in words; their order means nothing."""
+    return ", ".join(format_duration(period) for period in sorted(cycles_ns)) or "none"
 
 
 def _first_edge(shards: Sequence[Shard], leaf_ns: int) -> int:

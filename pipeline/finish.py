@@ -9,6 +9,7 @@ import numpy as np
 import numpy.typing as npt
 
 from shardfold import layout
+from shardfold.advice import group_names
 from shardfold.assess import Assessment
 from shardfold.blas import one_thread
 from shardfold.dossier import Dossier, npy_bytes
@@ -77,7 +78,7 @@ def write_parts(
         Of all coefficients.
     """
     segment = _segment(rows_of) if workplace.design.timed else 0
-    mapping = coefficient_map(finding, shape)
+    mapping, groups = coefficient_map(finding, shape), tuple(group_names(finding.judged))
     filled = ((leaf, group) for leaf, group in by_leaf(cells).items() if rows_of[leaf])
     tasks = [
         WriteCoefficients(
@@ -88,6 +89,7 @@ def write_parts(
             mapping,
             segment,
             finding.unit,
+            groups,
         )
         for index, (leaf, group) in enumerate(filled)
     ]

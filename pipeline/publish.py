@@ -105,8 +105,10 @@ def modes_table(finding: Finding) -> bytes:
     }
     for name, values in table.positions.items():
         columns[name] = Column(values, "", "position of the channel, as in the channel table")
-    for name, pattern in zip(mode_names(finding.rank, "mode"), finding.patterns.T, strict=True):
-        columns[name] = Column(pattern, "the channel's", "background + modes . coefficients is the channel's value")
+    about = "background + modes . coefficients is the channel's value"
+    names = zip(mode_names(finding.rank, "mode"), advice.group_names(finding.judged), strict=True)
+    for (name, group), pattern in zip(names, finding.patterns.T, strict=True):
+        columns[name] = Column(pattern, "the channel's", about, facts={} if group is None else {"group": group})
     return to_parquet(columns, {"caution": CAUTION})
 
 

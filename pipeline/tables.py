@@ -64,7 +64,12 @@ def mode_names(rank: int, stem: str) -> list[str]:
 
 
 def coefficient_table(
-    times: Array, shards: Sequence[str] | None, coefficients: Array, zoned: bool, unit: str
+    times: Array,
+    shards: Sequence[str] | None,
+    coefficients: Array,
+    zoned: bool,
+    unit: str,
+    groups: Sequence[str | None],
 ) -> bytes:
     """Return one part of the coefficients.
 
@@ -76,6 +81,8 @@ def coefficient_table(
         Shard of each sample, where there are no times.
     coefficients : ndarray (r, n)
         One row per mode; NaN where the mode is under the rounding floor.
+    groups : sequence of str or None, length r
+        Name of each mode's group, if it has one.
     """
     columns: dict[str, Column] = {}
     if shards is None:
@@ -84,8 +91,9 @@ def coefficient_table(
     else:
         columns["shard"] = Column(pa.array(shards).dictionary_encode(), "", "shard that holds the sample")
         columns["row"] = Column(times, "", "row of the sample within its shard, from 0")
-    for name, row in zip(mode_names(len(coefficients), "c"), coefficients, strict=True):
-        columns[name] = Column(row, unit, "coefficient of the mode; carries the energy (modes have unit length)")
+    about = "coefficient of the mode; carries the energy (modes have unit length)"
+    for name, row, group in zip(mode_names(len(coefficients), "c"), coefficients, groups, strict=True):
+        columns[name] = Column(row, unit, about, facts={} if group is None else {"group": group})
     return to_parquet(columns)
 
 

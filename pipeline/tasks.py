@@ -111,6 +111,7 @@ class WriteCoefficients:
     mapping: CoefficientMap
     segment: int
     unit: str
+    groups: tuple[str | None, ...]
 
 
 @dataclass(frozen=True)
@@ -255,7 +256,7 @@ def write_coefficients(workplace: Workplace, task: WriteCoefficients) -> PartWri
     timed = workplace.design.timed
     times, owners, values = _in_order([make(workplace, desk, cell, task) for cell in task.cells], timed)
     shards = None if timed else [str(owner) for owner in owners]
-    data = coefficient_table(times, shards, values, workplace.design.zoned, task.unit)
+    data = coefficient_table(times, shards, values, workplace.design.zoned, task.unit, task.groups)
     desk.dossier.put(task.key, data)
     steps = np.diff(times) if timed and len(times) > 1 else np.zeros(1, np.int64)
     power, segments = segment_power(np.nan_to_num(values), task.segment) if task.segment else (np.zeros((0, 0)), 0)

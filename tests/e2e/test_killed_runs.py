@@ -42,14 +42,14 @@ def write_campaign(store: Store) -> None:
         store.put(f"part-{number:03d}.parquet", bytes(sink.getvalue()))
 
 
-def write_job(path: Path, bucket: Any, endpoint: str, dossier: str, workers: str) -> Path:
+def write_job(path: Path, bucket: Any, endpoint: str, dossier: str, workers: str, design: str) -> Path:
     storage = f'storage: {{endpoint: "{endpoint}"}}'
     path.write_text(
         f"""
 campaign: killed
 source: {{location: {bucket.location}/campaign, layout: vector, time: t, values: v, settle: 0 s, {storage}}}
 dossier: {{location: {bucket.location}/{dossier}, {storage}}}
-design: {{width: 20, leaf: 15 min}}
+design: {{{design}, leaf: 15 min}}
 modes: {{rank: 4, reads: 2}}
 engine: {{workers: {workers}}}
 """
@@ -119,20 +119,22 @@ def whole_objects(store: Store) -> set[str]:
     return cells
 
 
-def requests_of_a_run(bucket: Any, proxy: Any, path: Path, workers: str) -> tuple[int, dict[str, bytes]]:
+def requests_of_a_run(
+    bucket: Any, proxy: Any, path: Path, workers: str, design: str
+) -> tuple[int, dict[str, bytes]]:
     """Run undisturbed; return how many requests it made and the Parquet files of its result."""
     proxy.forget()
-    finish(write_job(path / "whole.yaml", bucket, proxy.endpoint, "whole", workers))
+    finish(write_job(path / "whole.yaml", bucket, proxy.endpoint, "whole", workers, design))
     (undisturbed,) = results(open_store(f"{bucket.location}/whole", bucket.endpoint)).values()
     return sum(proxy.counts().values()), undisturbed
 
 
 def kill_and_finish(
-    bucket: Any, proxy: Any, path: Path, workers: str, moment: int, number: int, undisturbed: dict[str, bytes]
+    bucket: Any, proxy: Any, path: Path, how: tuple[str, str], moment: int, number: int, undisturbed: dict[str, bytes]
 ) -> bool:
     """Kill one run at a request, finish it, and hold the outcome against the undisturbed run; was it killed?"""
     name = f"killed-{number}"
-    job = write_job(path / f"{name}.yaml", bucket, proxy.endpoint, name, workers)
+    job = write_job(path / f"{name}.yaml", bucket, proxy.endpoint, name, *how)
     trap = KillAt(proxy, moment)
     process = trap.process = start(job)
     process.communicate(timeout=120)
@@ -144,22 +146,31 @@ def kill_and_finish(
     proxy.forget()
     finish(job)
     for shard in shards_done:
-        # The second read takes a footer and two row groups; the first read nothing but, at most, a footer.
+        # The second read, or that of the coefficients, takes a footer and two row groups; the first read nothing but,
+        # at most, a footer.
         assert proxy.count("GET", f"campaign/{shard}") <= 1 + 1 + GROUPS
     (again,) = results(dossier).values()
     assert again == undisturbed
     return trap.killed
 
 
-@pytest.mark.parametrize("workers", ["serial", "2"])
-def test_a_killed_run_is_finished_by_the_same_command(bucket: Any, proxy: Any, tmp_path: Path, workers: str) -> None:
+PROBE = "width: 20"
+
+
+@pytest.mark.parametrize(
+    ("workers", "design", "kills"),
+    [("serial", PROBE, KILLS), ("2", PROBE, 2), ("serial", "summary: exact", 4)],
+    ids=["serial", "2", "exact"],
+)
+def test_a_killed_run_is_finished_by_the_same_command(
+    bucket: Any, proxy: Any, tmp_path: Path, workers: str, design: str, kills: int
+) -> None:
     write_campaign(open_store(f"{bucket.location}/campaign", bucket.endpoint))
-    total, undisturbed = requests_of_a_run(bucket, proxy, tmp_path, workers)
+    total, undisturbed = requests_of_a_run(bucket, proxy, tmp_path, workers, design)
     rng = np.random.Generator(np.random.PCG64(2031))
-    kills = KILLS if workers == "serial" else 2
     moments = rng.choice(np.arange(3, total - 2), size=kills, replace=False)
     killed = [
-        kill_and_finish(bucket, proxy, tmp_path, workers, int(moment), number, undisturbed)
+        kill_and_finish(bucket, proxy, tmp_path, (workers, design), int(moment), number, undisturbed)
         for number, moment in enumerate(moments)
     ]
     assert sum(killed) >= kills - 1  # a request count may be a little lower than in the undisturbed run

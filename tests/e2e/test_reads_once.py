@@ -35,15 +35,15 @@ def _campaign(location: str, endpoint: str) -> None:
         store.put(f"{number}.parquet", bytes(sink.getvalue()))
 
 
-def _job(bucket: Any, endpoint: str, leaf: str, reads: int) -> Any:
+def _job(bucket: Any, endpoint: str, leaf: str, reads: int, design: str = "width: 20", rank: int = 2) -> Any:
     storage = f'storage: {{endpoint: "{endpoint}"}}'
     return parse_job(
         f"""
 campaign: once
 source: {{location: "{bucket.location}/c", layout: vector, time: t, values: v, settle: 0 s, {storage}}}
 dossier: {{location: "{bucket.location}/d", {storage}}}
-design: {{width: 20, leaf: {leaf}}}
-modes: {{rank: 2, reads: {reads}}}
+design: {{{design}, leaf: {leaf}}}
+modes: {{rank: {rank}, reads: {reads}}}
 """,
         "job.yaml",
     )
@@ -79,3 +79,19 @@ def test_row_groups_that_cross_an_edge_are_fetched_twice(bucket: Any, proxy: Any
     run(_job(bucket, proxy.endpoint, "1600 s", 1), SerialExecutor, lambda event: None)
     pieces, groups, crossing = 2, 4, 1
     assert set(_gets(proxy).values()) == {FOOTER_GETS + pieces * FOOTER_GETS + groups + crossing}
+
+
+def test_a_triangular_factor_takes_one_read_and_its_coefficients_another(bucket: Any, proxy: Any) -> None:
+    _campaign(f"{bucket.location}/c", bucket.endpoint)
+    exact = _job(bucket, proxy.endpoint, "1000 s", 1, "summary: exact")
+    run(exact, SerialExecutor, lambda event: None)
+    pieces, groups = 2, 4
+    once = pieces * FOOTER_GETS + groups
+    assert set(_gets(proxy).values()) == {FOOTER_GETS + 2 * once}
+    proxy.forget()
+    run(exact, SerialExecutor, lambda event: None)
+    assert set(_gets(proxy).values()) == {0}
+    assert proxy.count("PUT") == 0
+    # More modes come from the stored factor; only their coefficients are read.
+    run(_job(bucket, proxy.endpoint, "1000 s", 1, "summary: exact", rank=3), SerialExecutor, lambda event: None)
+    assert set(_gets(proxy).values()) == {once}

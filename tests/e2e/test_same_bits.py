@@ -21,16 +21,18 @@ from shardfold.store import open_store
 from shardfold.store_local import LocalAdapter
 
 CHANNELS, SAMPLES, STEP_NS = 300, 6000, 125_000_000
+FEW = 60  # channels of the campaign with a triangular factor
 START_NS = 1_932_000_000_000_000_000
 
 
-def matrix(dtype: Any) -> np.ndarray:
+def matrix(kind: str) -> np.ndarray:
     """Return (m, n): ten decaying patterns, an offset per channel and a little noise."""
     rng = np.random.Generator(np.random.PCG64(7))
     patterns = rng.standard_normal((CHANNELS, 10)) * 2.0 ** -np.arange(10)
     noise = 0.05 * rng.standard_normal((CHANNELS, SAMPLES))
     offset = 50 * rng.standard_normal((CHANNELS, 1))
-    return (patterns @ rng.standard_normal((10, SAMPLES)) + noise + offset).astype(dtype)
+    values = patterns @ rng.standard_normal((10, SAMPLES)) + noise + offset
+    return values[:FEW] if kind == "exact" else values.astype(kind)
 
 
 def write(folder: Path, values: np.ndarray, edges: list[int], row_group: int, *, backwards: bool = False) -> None:
@@ -47,13 +49,14 @@ def write(folder: Path, values: np.ndarray, edges: list[int], row_group: int, *,
         store.put(f"part-{name:03d}.parquet", bytes(sink.getvalue()))
 
 
-def job(campaign: Path, dossier: Path, width: int = 24) -> Any:
+def job(campaign: Path, dossier: Path, kind: str) -> Any:
+    design = "summary: exact" if kind == "exact" else "width: 24"
     return parse_job(
         f"""
 campaign: same-bits
 source: {{location: {campaign}, layout: vector, time: t, values: v, settle: 0 s}}
 dossier: {{location: {dossier}}}
-design: {{width: {width}, leaf: 2 min}}
+design: {{{design}, leaf: 2 min}}
 modes: {{rank: 6}}
 """,
         "job.yaml",
@@ -66,12 +69,12 @@ def tables(dossier: Path) -> dict[str, bytes]:
     return {str(path.relative_to(folder)): path.read_bytes() for path in sorted(folder.rglob("*.parquet"))}
 
 
-@pytest.fixture(scope="module", params=["float32", "float64"])
+@pytest.fixture(scope="module", params=["float32", "float64", "exact"])
 def campaign(request: Any, tmp_path_factory: Any) -> tuple[Path, dict[str, bytes], str]:
-    """A campaign whose shards cross leaf edges, and what a serial run makes of it."""
+    """A campaign whose shards cross leaf edges, and what a serial run makes of it; its kind is a type or a summary."""
     root = tmp_path_factory.mktemp(request.param)
     write(root / "campaign", matrix(request.param), [*range(0, SAMPLES, 700), SAMPLES], 350)
-    run(job(root / "campaign", root / "serial"), SerialExecutor, lambda event: None)
+    run(job(root / "campaign", root / "serial", request.param), SerialExecutor, lambda event: None)
     return root / "campaign", tables(root / "serial"), request.param
 
 
@@ -81,15 +84,15 @@ def test_ray_workers_make_the_bits_of_the_serial_run(
 ) -> None:
     from shardfold.executor_ray import RayExecutor
 
-    location, serial, _ = campaign
-    run(job(location, tmp_path / "d"), lambda: RayExecutor(workers, None), lambda event: None)
+    location, serial, kind = campaign
+    run(job(location, tmp_path / "d", kind), lambda: RayExecutor(workers, None), lambda event: None)
     assert tables(tmp_path / "d") == serial
 
 
 def test_the_order_of_the_listing_leaves_no_trace(
     campaign: Any, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    location, serial, _ = campaign
+    location, serial, kind = campaign
     page = LocalAdapter.page
 
     def reversed_page(self: LocalAdapter, prefix: str, bookmark: str | None) -> Any:
@@ -97,25 +100,25 @@ def test_the_order_of_the_listing_leaves_no_trace(
         return infos[::-1], more
 
     monkeypatch.setattr(LocalAdapter, "page", reversed_page)
-    run(job(location, tmp_path / "d"), SerialExecutor, lambda event: None)
+    run(job(location, tmp_path / "d", kind), SerialExecutor, lambda event: None)
     assert tables(tmp_path / "d") == serial
 
 
 def test_row_groups_leave_no_trace(campaign: Any, tmp_path: Path) -> None:
-    _, serial, dtype = campaign
-    write(tmp_path / "campaign", matrix(dtype), [*range(0, SAMPLES, 700), SAMPLES], 113)
-    run(job(tmp_path / "campaign", tmp_path / "d"), SerialExecutor, lambda event: None)
+    _, serial, kind = campaign
+    write(tmp_path / "campaign", matrix(kind), [*range(0, SAMPLES, 700), SAMPLES], 113)
+    run(job(tmp_path / "campaign", tmp_path / "d", kind), SerialExecutor, lambda event: None)
     assert tables(tmp_path / "d") == serial
 
 
 def test_shards_cut_anew_agree_to_rounding(campaign: Any, tmp_path: Path) -> None:
-    _, serial, dtype = campaign
-    write(tmp_path / "campaign", matrix(dtype), [0, 41, 1000, 1001, 3500, 3960, SAMPLES], 500, backwards=True)
-    run(job(tmp_path / "campaign", tmp_path / "d"), SerialExecutor, lambda event: None)
+    _, serial, kind = campaign
+    write(tmp_path / "campaign", matrix(kind), [0, 41, 1000, 1001, 3500, 3960, SAMPLES], 500, backwards=True)
+    run(job(tmp_path / "campaign", tmp_path / "d", kind), SerialExecutor, lambda event: None)
     again = tables(tmp_path / "d")
     assert sorted(again) == sorted(serial)
     values = _numbers(serial["mode_table.parquet"])[:, 0]
-    floor = 1e-12 if dtype == "float64" else 1e-6
+    floor = 1e-6 if kind == "float32" else 1e-12
     np.testing.assert_allclose(_numbers(again["mode_table.parquet"])[:, 0], values, rtol=floor)
     tolerance = _tolerances(values, floor)
     parts = sorted(name for name in serial if name.startswith("coefficients/"))
