@@ -44,6 +44,6 @@ Laws, each held by a property test:
 Reading order: ``checks``, ``addressed`` (random matrices by address), ``blocks`` (preparation), ``comoments`` (the
 summary and its merge), ``whole`` (a block into a summary, the hot path), ``background`` (functions of time and their
 removal), ``factors`` (modes), ``exact`` (the route for few channels), then what can be said of modes: ``bounds``
-(computation), ``noise``, ``sampling`` (length of the campaign), ``remedy`` (what would help), ``verdicts``, ``ranks``
-(how many modes); last ``spectra`` and ``cost``.
+(computation), ``noise``, ``leaves`` and ``sampling`` (length of the campaign), ``remedy`` (what would help),
+``verdicts``, ``ranks`` (how many modes); last ``spectra`` and ``cost``.
 """

@@ -24,10 +24,11 @@ from shardfold.job_values import MOST_READS
 from shardfold.kernels.addressed import STREAM_CHECK, name_keys, normals
 from shardfold.kernels.bounds import CLOSE, Bounds, Checks, Residuals, bounds, residuals
 from shardfold.kernels.factors import Factors, fresh_rows
+from shardfold.kernels.leaves import LeafTerms
 from shardfold.kernels.noise import NoiseEdge, State, noise_edge
 from shardfold.kernels.ranks import AboveNoise, Angle, Count, Energy, RankChoice, RankReason, RankRule, choose_rank
 from shardfold.kernels.remedy import Predictions, fit_spectrum, head_size, predict, squares_outside
-from shardfold.kernels.sampling import LeafTerms, Sampling, sampling
+from shardfold.kernels.sampling import Sampling, sampling
 from shardfold.kernels.verdicts import Judgement, ReadDecision, judge, read_again
 from shardfold.kernels.whole import Summary
 from shardfold.leaf_terms import TermsTaken, mode_map, terms_tasks

@@ -25,8 +25,8 @@ INTERPRETER_BYTES = 240 * MIB
 """A worker between tasks, once it has done some: 125 to 158 MiB of its own (72 before the first), and some 95 MiB of
 code, which it shares with other processes of the same installation and would hold alone on a node of its own."""
 
-DRIVER_BYTES = 260 * MIB
-"""The driver before it holds a sum or thousands of shards: 140 to 191 MiB of its own, and the same code."""
+DRIVER_BYTES = 280 * MIB
+"""The driver before it holds a sum or thousands of shards: 140 to 250 MiB of its own, and the same code."""
 
 RAY_NODE_BYTES = 450 * MIB
 """Ray's own processes on a node, counted once where they share: 276 to 340 MiB with two workers."""

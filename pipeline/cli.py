@@ -13,6 +13,7 @@ import sys
 import traceback
 from collections.abc import Callable
 from dataclasses import asdict
+from importlib.metadata import version
 from pathlib import Path
 from types import FrameType
 from typing import Any, TypeVar
@@ -23,6 +24,7 @@ from rich.table import Table
 
 from shardfold import demo as demonstration
 from shardfold.budget import MIB
+from shardfold.decisions import Decision, readmit, withdraw
 from shardfold.errors import InputError, JobInvalid, ShardfoldError, Stopped
 from shardfold.executor import Executor, SerialExecutor
 from shardfold.forecast import forecast
@@ -31,7 +33,7 @@ from shardfold.progress import Teller
 from shardfold.publish import CAUTION
 from shardfold.results import Result, mode_rows, open_result
 from shardfold.run import Report, run
-from shardfold.site import local_places
+from shardfold.site import local_places, open_dossier
 
 F = TypeVar("F", bound=Callable[..., Any])
 
@@ -113,6 +115,37 @@ def show_command(result: str, endpoint: str | None, as_json: bool, quiet: bool) 
         _emit({"manifest": found.manifest, "mode_table": found.mode_table.to_pylist()})
     else:
         _print_result(found, quiet)
+
+
+def _deciding(function: F) -> F:
+    for option in (
+        click.option("--because", required=True, metavar="TEXT", help="The reason; it stays in the ledger."),
+        click.option("--endpoint", default=None, help="S3 endpoint (or AWS_ENDPOINT_URL)."),
+        click.argument("shards", nargs=-1, required=True),
+        click.argument("dossier"),
+    ):
+        function = option(function)
+    return function
+
+
+@commands.command("withdraw")
+@_deciding
+@_common
+def withdraw_command(
+    dossier: str, shards: tuple[str, ...], because: str, endpoint: str | None, as_json: bool, quiet: bool
+) -> None:
+    """Take SHARDS out of the sums of a DOSSIER (a job file or a location); the next run carries it out."""
+    _print_decision(withdraw(open_dossier(dossier, endpoint), shards, because, version("shardfold")), as_json, quiet)
+
+
+@commands.command("readmit")
+@_deciding
+@_common
+def readmit_command(
+    dossier: str, shards: tuple[str, ...], because: str, endpoint: str | None, as_json: bool, quiet: bool
+) -> None:
+    """Let withdrawn SHARDS back into the sums of a DOSSIER; the next run carries it out."""
+    _print_decision(readmit(open_dossier(dossier, endpoint), shards, because, version("shardfold")), as_json, quiet)
 
 
 @commands.command("demo")
@@ -228,6 +261,18 @@ def _print_report(report: Report, job: Job, quiet: bool) -> None:
         click.echo(f"shards refused before and still: {report.standing_refused}", err=True)
 
 
+def _print_decision(made: Decision, as_json: bool, quiet: bool) -> None:
+    if as_json:
+        _emit(asdict(made) | {"run_outstanding": bool(made.changed)})
+        return
+    if quiet:
+        return
+    for key in made.unchanged:
+        click.echo(f"{key}: as it was")
+    if made.changed:
+        click.echo(f"ledger {made.number}: {', '.join(made.changed)}; a run is outstanding")
+
+
 def _print_result(result: Result, quiet: bool) -> None:
     heading, *rows = mode_rows(result)
     table = Table(box=None, pad_edge=False, header_style="bold")
@@ -273,7 +318,7 @@ def _print_forecast(f: dict[str, Any]) -> None:
         f"{f['channels']:,} channels; footers read: {shards['footers_read']}",
         "span": " to ".join(f["span"]) if f["span"] else "no times",
         "left": f"{shards['left_for_later']} too young, {len(shards['refused'])} refused, "
-        f"{shards['not_listed_any_more']} kept though no longer listed",
+        f"{shards['withdrawn']} withdrawn, {shards['not_listed_any_more']} kept though no longer listed",
         "summary": f["summary"],
         "leaf": f"{f['leaf']}; {f['cells']['all']:,} cells, {f['cells']['stored']:,} of them stored",
         "reads": f"{reads['passes']} pass(es): {_mib(reads['bytes_first'])} now, {_mib(again)} again"

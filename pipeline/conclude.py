@@ -66,6 +66,7 @@ def conclude(site: Site, intake: Intake, done: Pass, judged: Assessment, started
         "set": [o for o in site.job.overrides if o.partition("=")[0].partition(".")[0].strip() == "modes"],
         "blas": sorted(intake.cores | {core_type()}),
         "shards": _shards(site, intake),
+        "withdrawn": _withdrawn(site),
     }
     new = seal(store, prefix, manifest(facts, files, _made(started, intake)))
     intake.listen(Published(folder + prefix, new=new))
@@ -151,6 +152,12 @@ def _shards(site: Site, intake: Intake) -> list[dict[str, Any]]:
             "listed": entry.key not in site.absent,
         }
         for entry in entries
+    ]
+
+
+def _withdrawn(site: Site) -> list[dict[str, Any]]:
+    return [
+        {"key": entry.key, "version": entry.version, **entry.why} for _, entry in sorted(site.withdrawn.items())
     ]
 
 

@@ -21,7 +21,7 @@ from shardfold.ledger import Entry
 from shardfold.plan import Cell, bytes_to_read, cut, tree
 from shardfold.quantities import format_duration
 from shardfold.refusals import found_in, nothing_left, refusal_of
-from shardfold.run import check_rank, reads_of, shapes_of
+from shardfold.run import check_rank, check_shards, reads_of, shapes_of
 from shardfold.site import Site, look
 from shardfold.summaries import bytes_of, fold_flops
 from shardfold.sums import leaf_names
@@ -91,6 +91,7 @@ def forecast(job: Job, workers: int, listen: Listener) -> Forecast:
 def _refusal(site: Site, cells: Sequence[Cell], refused: dict[str, Entry], memory: budget.Budget) -> InputError | None:
     """Return the error with which a run would end before it reads, or ``None``."""
     try:
+        check_shards(site)
         check_rank(site)
         if not cells:
             raise nothing_left(refused)
@@ -111,6 +112,7 @@ def _shards(site: Site, refused: dict[str, Entry]) -> dict[str, Any]:
         "to_take_in": len(site.shards.keys() - refused.keys()),
         "left_for_later": len(inventory.unsettled),
         "refused": {key: found_in(entry) for key, entry in sorted(refused.items())},
+        "withdrawn": len(site.withdrawn),
         "not_listed_any_more": len(site.absent),
         "footers_read": "sampled" if inventory.sampled else "all",
     }

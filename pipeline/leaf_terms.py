@@ -16,7 +16,7 @@ import numpy.typing as npt
 from shardfold import artifacts, layout
 from shardfold.design import Design
 from shardfold.kernels.background import Removal
-from shardfold.kernels.sampling import LeafTerms, join, leaf_terms
+from shardfold.kernels.leaves import LeafTerms, join, leaf_terms
 from shardfold.kernels.whole import Shape
 from shardfold.plan import MOST_TERMS, Cell, by_leaf
 from shardfold.store import Store

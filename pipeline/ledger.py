@@ -2,8 +2,8 @@
 
 A commit is one conditional create, so two writers cannot both have a number. It ends in one of three ways: landed,
 refused (another writer took the number), or unknown (the answer was lost; the token in the body, read back, tells).
-State is the replay of all commits. Withdrawal, corrections and checkpoints have room as further fields of a delta;
-a reader refuses a format newer than its own.
+State is the replay of all commits. Corrections and checkpoints have room as further fields of a delta; a reader refuses
+a format newer than its own.
 """
 
 from __future__ import annotations
@@ -20,13 +20,16 @@ from shardfold.errors import RecordCorrupt, WriterConflict
 from shardfold.ids import ObjectInfo, RowGroup, Shard, canonical_json, digest_bytes
 from shardfold.store import Created, Store
 
-FORMAT = 1
-State = Literal["in", "refused", "replaced"]
+FORMAT = 2
+State = Literal["in", "refused", "withdrawn", "readmitted"]
 
 
 @dataclass(frozen=True)
 class Entry:
     """What the ledger says of one shard version.
+
+    A withdrawn shard is out until it is readmitted; then it is in as soon as a run has taken it in. ``why`` says what
+    is wrong with a refused shard, and who decided what for which reason of a withdrawn one.
 
     ``shard`` is what its footer said, kept so that no footer is read twice; ``first``, ``last``, ``rows`` and
     ``digest`` are what was found when it was read; ``under`` is the digest of the source settings it was judged by.

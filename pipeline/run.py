@@ -46,6 +46,8 @@ class Report:
         Shards refused by this run, and by earlier ones for the same reason.
     refused : dict of key to str
         What is wrong with each of them.
+    withdrawn : dict of key to str
+        Why each shard that was taken out by decision is out.
     """
 
     location: str
@@ -57,6 +59,7 @@ class Report:
     newly_refused: int
     standing_refused: int
     refused: dict[str, str] = field(default_factory=dict)
+    withdrawn: dict[str, str] = field(default_factory=dict)
     quality: dict[str, Any] = field(default_factory=dict)
 
 
@@ -81,6 +84,7 @@ def run(job: Job, make_executor: Callable[[], Executor], listen: Listener) -> Re
     site = look(job, listen)
     executor = Deferred(make_executor)
     try:
+        check_shards(site)
         check_rank(site)
         intake = _intake(site, executor, listen)
         reads = reads_of(job, site.dossier.design)
@@ -217,6 +221,19 @@ def _refuse_too_large(site: Site, intake: Intake, reads: int) -> None:
         budget.check(plan, engine.memory_bytes, cells)
 
 
+def check_shards(site: Site) -> None:
+    """Refuse a campaign of which nothing is left."""
+    if site.shards or site.standing or not site.withdrawn:
+        return
+    raise InputError(
+        "every shard is withdrawn",
+        where=site.job.dossier.location,
+        rule="at least one shard that is in",
+        got=f"{len(site.withdrawn)} withdrawn, none else",
+        remedy="shardfold readmit DOSSIER SHARD --because TEXT",
+    )
+
+
 def check_rank(site: Site) -> None:
     """Refuse more modes than there are samples or channels, or than the probe can carry."""
     rank = site.job.modes.rank
@@ -255,5 +272,6 @@ def _report(site: Site, intake: Intake, end: Conclusion) -> Report:
         newly_refused=fresh,
         standing_refused=len(intake.refused) - fresh,
         refused={key: found_in(entry) for key, entry in sorted(intake.refused.items())},
+        withdrawn={key: entry.why.get("reason", "") for key, entry in sorted(site.withdrawn.items())},
         quality=end.quality,
     )

@@ -21,7 +21,7 @@ from shardfold.errors import InputError, ShardRefused
 from shardfold.events import Found, Listener, Noted
 from shardfold.ids import Shard, digest_value
 from shardfold.inventory import Inventory, agree, take_inventory
-from shardfold.job import Job
+from shardfold.job import Job, load_job
 from shardfold.job_settings import TimeStart
 from shardfold.ledger import Entry, Ledger
 from shardfold.quantities import format_duration
@@ -42,6 +42,8 @@ class Site:
         What shall be in: listed and settled, or in the ledger and no longer listed (``absent``).
     standing : dict of key to Entry
         Refusals of this inventory and of earlier runs that still hold.
+    withdrawn : dict of key to Entry
+        Shards that were taken out by decision, in the versions that are listed or were last seen.
     under : str
         Digest of the source settings, by which refusals are judged.
     exists : bool
@@ -56,6 +58,7 @@ class Site:
     shards: dict[str, Shard]
     absent: frozenset[str]
     standing: dict[str, Entry]
+    withdrawn: dict[str, Entry]
     under: str
     exists: bool
     source_names: tuple[str, ...]
@@ -76,6 +79,30 @@ def settings(job: Job, which: str) -> StoreSettings:
     """Return the settings of the campaign's (``source``) or the dossier's (``dossier``) store."""
     place = job.source if which == "source" else job.dossier
     return StoreSettings(place.location, place.storage.endpoint, place.storage.region, place.storage.anonymous)
+
+
+def open_dossier(place: str, endpoint: str | None) -> Store:
+    """Return the store of a dossier that is named by a job file or by its location.
+
+    Raises
+    ------
+    InputError
+        If there is no dossier.
+    """
+    if Path(place).is_file():
+        place, settled = str(Path(place)), settings(load_job(Path(place), (), endpoint), "dossier")
+    else:
+        settled = StoreSettings(place, endpoint)
+    store = connect(settled)
+    if dossiers.load(store) is None:
+        raise InputError(
+            "there is no dossier",
+            where=place,
+            rule="a job file, or the location of a dossier",
+            got="no design.json there",
+            remedy="'shardfold run JOB' creates one",
+        )
+    return store
 
 
 def look(job: Job, listen: Listener, *, sample: int | None = None) -> Site:
@@ -109,8 +136,9 @@ def look(job: Job, listen: Listener, *, sample: int | None = None) -> Site:
             campaign, reader, job.source.match, job.source.settle_ns, time.time(), known=known, limit=sample
         )
     under = digest_value(job.design_record())
+    withdrawn = {key: entry for key, entry in state.shards.items() if entry.state == "withdrawn"}
     shards, standing = _sort_out(inventory, state, under)
-    if standing and not shards and not any(entry.state == "in" for entry in state.shards.values()):
+    if standing and not shards and not any(entry.state != "refused" for entry in state.shards.values()):
         raise _nothing_readable(job, standing)
     if isinstance(job.source.time, TimeStart) and inventory.listed > 1:
         raise _one_start(inventory)
@@ -119,18 +147,25 @@ def look(job: Job, listen: Listener, *, sample: int | None = None) -> Site:
     _check_agreement(shards, standing, opened, under, known)
     absent = _absent(state, inventory, shards, opened.table)
     _tell(listen, inventory, absent)
+    replaced = {shard.key for shard in inventory.shards if shard.key in shards} | standing.keys()
+    withdrawn = {key: entry for key, entry in withdrawn.items() if key not in replaced}
     return Site(
-        job, campaign, opened, state, inventory, shards, frozenset(absent), standing, under, stored is not None, names
-    )
+        job, campaign, opened, state, inventory, shards, frozenset(absent), standing, withdrawn, under,
+        stored is not None, names,
+    )  # fmt: skip
 
 
 def _sort_out(inventory: Inventory, state: Ledger, under: str) -> tuple[dict[str, Shard], dict[str, Entry]]:
-    """Part the inventory into shards to take in and refusals, those of earlier runs that still hold included."""
+    """Part the inventory into shards to take in and refusals, those of earlier runs that still hold included.
+
+    A shard that was withdrawn is neither, and in nobody's way.
+    """
     shards, standing = {}, {}
-    listed = {shard.key: shard.info.version for shard in inventory.shards}
+    out = {(entry.key, entry.version) for entry in state.shards.values() if entry.state == "withdrawn"}
+    listed = {s.key: s.info.version for s in inventory.shards if (s.key, s.info.version) not in out}
     for refusal in inventory.refused:
         standing[refusal.key] = Entry(refusal.key, refusal.version, "refused", under, why=dict(refusal.error_record))
-    for shard in inventory.shards:
+    for shard in (shard for shard in inventory.shards if shard.key in listed):
         before = state.entry(shard.key, shard.info.version)
         if before is not None and before.under == under and still_refused(before, state, listed):
             standing[shard.key] = before
@@ -179,7 +214,7 @@ def _absent(state: Ledger, inventory: Inventory, shards: dict[str, Shard], table
     listed = {s.key for s in inventory.shards} | {r.key for r in inventory.refused}
     absent = []
     for key, entry in state.shards.items():
-        if entry.state == "in" and key not in listed and entry.shard is not None:
+        if entry.state in ("in", "readmitted") and key not in listed and entry.shard is not None:
             shards[key] = replace(entry.shard, channels=table.names)
             absent.append(key)
     return absent

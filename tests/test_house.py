@@ -30,7 +30,7 @@ LAYERS = (
     "job job_* yaml_* quantities layout store store_* local_s3 blas allocator",
     "readers readers.* inventory channels artifacts tables design",
     "summaries",
-    "dossier plan budget ledger refusals",
+    "dossier plan budget ledger refusals decisions",
     "block_cuts gather project leaf_terms tasks executor",
     "executor_ray site ingest sums",
     "assess background_columns",

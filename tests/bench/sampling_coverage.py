@@ -20,8 +20,9 @@ from scipy.signal import lfilter
 
 from shardfold.kernels import addressed, background, factors, whole
 from shardfold.kernels.blocks import Preparation
+from shardfold.kernels.leaves import LeafTerms, leaf_terms
 from shardfold.kernels.noise import noise_edge
-from shardfold.kernels.sampling import LeafTerms, Sampling, leaf_terms, sampling
+from shardfold.kernels.sampling import Sampling, sampling
 
 Floats = np.ndarray
 JUDGED = 5

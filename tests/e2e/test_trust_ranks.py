@@ -32,8 +32,8 @@ class Place:
     """A campaign in a folder and results of it by any rule."""
 
     def __init__(self, folder: Path, matrix: np.ndarray, **design: Any) -> None:
-        self.folder, self.matrix, self.design = folder, matrix, {"width": WIDTH, "leaf": "10 s", **design}
-        write_vector(open_store(f"{folder}/campaign"), matrix, even_times(SAMPLES), shards=3, row_group=80)
+        self.folder, self.matrix, self.design = folder, matrix, {"width": WIDTH, "leaf": "15 s", **design}
+        write_vector(open_store(f"{folder}/campaign"), matrix, even_times(SAMPLES), shards=3, row_group=120)
 
     def run(self, **modes: Any) -> Found:
         places = (f"{self.folder}/campaign", f"{self.folder}/dossier")
@@ -115,7 +115,7 @@ def test_an_angle_that_no_mode_keeps_gives_one_and_says_so(tmp_path: Path) -> No
     assert "not even the first mode is within the angle" in quality(found)["next"]
 
 
-@pytest.mark.parametrize("route", ["probe", "identity", "exact"])
+@pytest.mark.parametrize("route", ["probe", "exact"])
 def test_the_noise_edge_counts_what_was_planted(route: str, tmp_path: Path) -> None:
     channels, design = ROUTES[route]
     place = Place(tmp_path, field(np.array([4.0, 3.0, 2.0]), channels, noise=0.02), **design)
@@ -139,7 +139,7 @@ def test_nothing_but_noise_gives_one_mode_and_says_that_none_is_above(tmp_path: 
 PAIR = np.array([4.0, 3.0, 2.0, 2.0, 1.0])
 
 
-@pytest.fixture(scope="module", params=ROUTES.values(), ids=ROUTES.keys())
+@pytest.fixture(scope="module", params=[ROUTES["probe"], ROUTES["exact"]], ids=["probe", "exact"])
 def pair(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> Place:
     """Modes 3 and 4 of the same size."""
     channels, design = request.param

@@ -49,20 +49,20 @@ class Place:
     def __init__(self, folder: Path, matrix: np.ndarray) -> None:
         self.folder, self.matrix = folder, matrix
         self.notes: list[str] = []
-        self.reading: list[str] = []
-        write_vector(open_store(f"{folder}/campaign"), matrix, even_times(matrix.shape[1]), shards=3, row_group=80)
+        self.reading: dict[str, int] = {}  # bytes to read of the campaign, by stage
+        write_vector(open_store(f"{folder}/campaign"), matrix, even_times(matrix.shape[1]), shards=3, row_group=120)
 
     def job(self, design: dict[str, Any] | None = None, engine: dict[str, Any] | None = None, **modes: Any) -> Any:
         text = job_text(
             f"{self.folder}/campaign", f"{self.folder}/dossier", "vector",
-            design={"width": WIDTH, "leaf": "10 s", **(design or {})},
+            design={"width": WIDTH, "leaf": "15 s", **(design or {})},
             modes={"tolerance": f"{LIMIT:g} deg", **modes},
             engine=engine or {"workers": "serial"},
         )  # fmt: skip
         return parse_job(text, "job.yaml")
 
     def run(self, job: Any, make_executor: Any = SerialExecutor) -> tuple[Report, Found]:
-        self.notes, self.reading = [], []
+        self.notes, self.reading = [], {}
         report = run(job, make_executor, self._listen)
         return report, Found(open_result(report.location))
 
@@ -70,7 +70,7 @@ class Place:
         if isinstance(event, Noted):
             self.notes.append(event.text)
         if isinstance(event, StageStarted) and event.bytes_to_read:
-            self.reading.append(event.stage)
+            self.reading[event.stage] = event.bytes_to_read
 
 
 def bounds_of(found: Found) -> np.ndarray:
@@ -163,7 +163,7 @@ def test_a_repeated_run_starts_nothing_and_finds_the_standing_result(case: Any) 
     place, modes, needed, report, _, _ = case
     again, _ = place.run(place.job(**modes, reads="auto"), no_executor)
     assert (again.location, again.new, again.reads) == (report.location, False, needed)
-    assert (again.bytes_read, again.cells_read, place.reading, place.notes) == (0, 0, [], [])
+    assert (again.bytes_read, again.cells_read, place.reading, place.notes) == (0, 0, {}, [])
 
 
 def test_a_new_shard_is_read_as_often_as_the_others_were_and_they_are_not(tmp_path: Path) -> None:
@@ -173,11 +173,12 @@ def test_a_new_shard_is_read_as_often_as_the_others_were_and_they_are_not(tmp_pa
     assert place.run(job)[0].reads == 3
     store = open_store(f"{tmp_path}/campaign")
     times = even_times(1600)[1200:]
-    write_vector(store, matrix[:, 1200:], times, shards=1, row_group=80, prefix="later-")
+    write_vector(store, matrix[:, 1200:], times, shards=1, row_group=120, prefix="later-")
     size = next(info.size for info in store.list("later-"))
     report, found = place.run(job)
     assert report.new
-    assert report.bytes_read <= report.reads * size
+    assert list(place.reading) == ["read", "read 2", "read 3"]
+    assert max(place.reading.values()) <= size
     place.matrix = matrix
     left, _ = angles(found, matrix)
     assert (left <= found.column("angle_bound_deg")).all()
@@ -221,7 +222,8 @@ def test_where_another_read_cannot_help_it_stops_at_once_and_says_why(name: str,
     another = found.result.manifest["quality"]["another_read"]
     assert another["helps"] is False
     assert place.notes[-1] == f"no further read: {another['why']}"
-    assert place.reading == ["read"] * reads + ["coefficients"] * (modes.get("design") is not None)
+    again = [f"read {number}" for number in range(2, reads + 1)]
+    assert list(place.reading) == ["read", *again] + ["coefficients"] * ("design" in modes)
 
 
 def test_a_mode_that_only_rounding_blurs_is_not_read_for_again(tmp_path: Path) -> None:
@@ -251,7 +253,7 @@ def test_a_further_read_that_does_not_fit_into_memory_is_not_made_and_said(tmp_p
     report, found = place.run(place.job(rank=6, reads="auto", engine=engine))
     assert report.reads == 1
     assert place.notes[-1].startswith("another read would help, but engine.memory: ")
-    assert place.reading == ["read"]
+    assert list(place.reading) == ["read"]
     assert found.result.manifest["quality"]["another_read"]["helps"]  # with more memory, it would
 
 
@@ -260,4 +262,4 @@ def test_more_reads_than_a_summary_of_all_channels_needs_are_not_made_and_said(t
     report, _ = place.run(place.job(rank=2, reads=3))
     assert report.reads == 1
     assert place.notes == ["all channels are kept and nothing is lost: one read is enough"]
-    assert place.reading == ["read", "coefficients"]
+    assert list(place.reading) == ["read", "coefficients"]

@@ -13,8 +13,9 @@ from scipy.signal import lfilter
 
 from shardfold.kernels import addressed, background, factors, whole
 from shardfold.kernels.blocks import Preparation
+from shardfold.kernels.leaves import LeafTerms, join, leaf_terms
 from shardfold.kernels.noise import NoiseEdge, State, noise_edge
-from shardfold.kernels.sampling import LeafTerms, Sampling, join, leaf_terms, sampling
+from shardfold.kernels.sampling import Sampling, sampling
 
 JUDGED = 4
 FALL = 0.5 ** np.arange(6)
