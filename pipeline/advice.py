@@ -137,14 +137,17 @@ def _remedy(remedy: Remedy, verdict: Verdict) -> str | None:
         state = "no bound" if remedy.degrees is None else f"known to {_angle(remedy.degrees)}"
         return f"use the space of the group as one: {state}"
     if remedy.kind is RemedyKind.DATA:
-        return _data(remedy.factor)
+        return _data(remedy.factor, verdict)
     if verdict is Verdict.UNRESOLVED:
         return "nothing in sight: neither another read nor twice the width is expected to help"
     return None
 
 
-def _data(factor: float | None) -> str:
-    if factor is None or factor > MOST_QUOTED:
+def _data(factor: float | None, verdict: Verdict) -> str:
+    if factor is None:
+        unknown = ": its leaves are too few, or too alike, to say how much" if verdict is Verdict.SHORT_DATA else ""
+        return f"more measurement{unknown}"
+    if factor > MOST_QUOTED:
         return "much more measurement"
     return f"about {factor:.2g} times as much measurement"
 

@@ -19,29 +19,23 @@ from types import FrameType
 from typing import Any, TypeVar
 
 import click
-from rich.console import Console
-from rich.table import Table
 
 from shardfold import demo as demonstration
-from shardfold.budget import MIB
 from shardfold.decisions import Decision, readmit, withdraw
 from shardfold.errors import InputError, JobInvalid, ShardfoldError, Stopped
 from shardfold.executor import Executor, SerialExecutor
 from shardfold.forecast import forecast
+from shardfold.history import result_rows, shard_rows
 from shardfold.job import Job, load_job
 from shardfold.progress import Teller
-from shardfold.publish import CAUTION
-from shardfold.results import Result, mode_rows, open_result
+from shardfold.results import open_result
 from shardfold.run import Report, run
+from shardfold.screens import closeness_text, forecast_text, ledger_text, result_text, results_text
 from shardfold.site import local_places, open_dossier
 
 F = TypeVar("F", bound=Callable[..., Any])
 
 REFUSED_STATUS = 3
-READING = (
-    "Accuracy: at most this far from the exact mode of these data (computation). Sampling: how far the exact mode may "
-    "be from that of the process, nine times in ten (length of the campaign). A group counts as one space."
-)
 
 
 def _common(function: F) -> F:
@@ -82,7 +76,7 @@ def check_command(
     if as_json:
         _emit(found.figures | ({} if found.refusal is None else _error_document(found.refusal)))
     else:
-        _print_forecast(found.figures)
+        click.echo(forecast_text(found.figures))
     if found.refusal is not None:
         click.echo(f"shardfold: a run would be refused: {found.refusal}", err=True)
         sys.exit(found.refusal.exit_status)
@@ -114,7 +108,34 @@ def show_command(result: str, endpoint: str | None, as_json: bool, quiet: bool) 
     if as_json:
         _emit({"manifest": found.manifest, "mode_table": found.mode_table.to_pylist()})
     else:
-        _print_result(found, quiet)
+        click.echo(result_text(found, quiet))
+
+
+@commands.command("ledger")
+@click.argument("dossier")
+@click.option("--all", "everything", is_flag=True, help="All shards, not only those that are not simply in.")
+@click.option("--endpoint", default=None, help="S3 endpoint (or AWS_ENDPOINT_URL).")
+@_common
+def ledger_command(dossier: str, everything: bool, endpoint: str | None, as_json: bool, quiet: bool) -> None:
+    """Say which shards of a DOSSIER (a job file or a location) are in and which are not, and why."""
+    number, rows = shard_rows(open_dossier(dossier, endpoint))
+    if as_json:
+        _emit({"ledger_number": number, "shards": [asdict(row) for row in rows]})
+    else:
+        click.echo(ledger_text(number, rows, everything))
+
+
+@commands.command("results")
+@click.argument("dossier")
+@click.option("--endpoint", default=None, help="S3 endpoint (or AWS_ENDPOINT_URL).")
+@_common
+def results_command(dossier: str, endpoint: str | None, as_json: bool, quiet: bool) -> None:
+    """List the published results of a DOSSIER, oldest first."""
+    rows = result_rows(open_dossier(dossier, endpoint))
+    if as_json:
+        _emit({"results": [asdict(row) for row in rows]})
+    else:
+        click.echo(results_text(rows))
 
 
 def _deciding(function: F) -> F:
@@ -162,8 +183,8 @@ def demo_command(folder: Path, s3: bool, as_json: bool, quiet: bool) -> None:
         if as_json:
             _emit({"report": asdict(report), "job": str(scene.job), "closeness": [asdict(row) for row in rows]})
             return
-        _print_result(found, quiet)
-        _print_closeness(rows)
+        click.echo(result_text(found, quiet))
+        click.echo(closeness_text(rows))
         click.echo(f"\nLook at\n  the job        {scene.job}\n  the result     {report.location}")
         click.echo(f"  once more      shardfold run {scene.job}   (nothing is read twice)")
 
@@ -271,71 +292,3 @@ def _print_decision(made: Decision, as_json: bool, quiet: bool) -> None:
         click.echo(f"{key}: as it was")
     if made.changed:
         click.echo(f"ledger {made.number}: {', '.join(made.changed)}; a run is outstanding")
-
-
-def _print_result(result: Result, quiet: bool) -> None:
-    heading, *rows = mode_rows(result)
-    table = Table(box=None, pad_edge=False, header_style="bold")
-    for title in heading:
-        table.add_column(title, justify="left" if title == "verdict" else "right", no_wrap=True)
-    for row in rows:
-        table.add_row(*row)
-    console = Console(highlight=False, soft_wrap=True, width=None if sys.stdout.isatty() else 120)
-    with console.capture() as text:
-        _write_result(console, table, result, quiet)
-    click.echo(text.get(), nl=False)
-
-
-def _write_result(console: Console, table: Table, result: Result, quiet: bool) -> None:
-    q = result.manifest["quality"]
-    console.print(
-        f"{result.manifest['campaign']}: {q['channels']:,} channels, {q['samples']:,} samples, "
-        f"{len(result.manifest['shards']):,} shards, {result.manifest['reads']} read(s); "
-        f"removed: {q['removed']}; tolerance {q['tolerance_deg']:g} deg",
-        markup=False,
-    )
-    console.print(table)
-    if not quiet:
-        for text in (f"Next: {result.next_step}", READING, CAUTION):
-            console.print(text, markup=False, soft_wrap=False)
-
-
-def _print_closeness(rows: Any) -> None:
-    click.echo("\nSet against the beam that the demo was made from:")
-    click.echo("mode  bending shape     MAC   frequency Hz   built in Hz   ratio (1 : 4 : 9)")
-    for row in rows:
-        click.echo(
-            f"{row.mode:>4}  {row.shape:>13}  {row.mac:.4f}  {row.found_hz:>12.3f}  {row.beam_hz:>12.3f}"
-            f"   {row.ratio:.2f} : {row.beam_ratio}"
-        )
-
-
-def _print_forecast(f: dict[str, Any]) -> None:
-    reads, memory, work, shards = f["reads"], f["memory"], f["work"], f["shards"]
-    again = reads["bytes_further"] + reads["bytes_for_coefficients"]
-    lines = {
-        "campaign": f"{f['campaign']}: {shards['to_take_in']:,} shards, {f['samples']:,} samples, "
-        f"{f['channels']:,} channels; footers read: {shards['footers_read']}",
-        "span": " to ".join(f["span"]) if f["span"] else "no times",
-        "left": f"{shards['left_for_later']} too young, {len(shards['refused'])} refused, "
-        f"{shards['withdrawn']} withdrawn, {shards['not_listed_any_more']} kept though no longer listed",
-        "summary": f["summary"],
-        "leaf": f"{f['leaf']}; {f['cells']['all']:,} cells, {f['cells']['stored']:,} of them stored",
-        "reads": f"{reads['passes']} pass(es): {_mib(reads['bytes_first'])} now, {_mib(again)} again"
-        f"{'; more where the tolerance asks for it' if reads['more_if_needed'] else ''}",
-        "work": f"{work['flops']:.3g} flops, about {work['seconds_about']:,} s with {work['workers']} worker(s) "
-        f"({work['assumed_read_rate']} assumed; start-up apart)",
-        "memory": f"{_mib(memory['worker_bytes'])} per worker (limit {_mib(memory['worker_limit_bytes'])}), "
-        f"driver {_mib(memory['driver_bytes'])}, object store {_mib(memory['object_store_bytes'])}, "
-        f"node {_mib(memory['node_bytes'])}",
-        "storage": f"{_mib(f['storage_bytes'])} in the dossier",
-        "dossier": f["dossier"],
-    }
-    for name, text in lines.items():
-        click.echo(f"{name:>9}  {text}")
-    for key, why in list(shards["refused"].items())[:10]:
-        click.echo(f"  refused  {key}: {why}")
-
-
-def _mib(count: float) -> str:
-    return f"{count / MIB:,.0f} MiB" if count >= 10 * MIB else f"{count / MIB:,.2f} MiB"

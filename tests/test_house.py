@@ -39,7 +39,9 @@ LAYERS = (
     "finish",
     "conclude",
     "run forecast",
-    "results tarnmoor demo progress cli __init__ __main__",
+    "results history",
+    "screens",
+    "tarnmoor demo progress cli __init__ __main__",
 )
 
 # Who may import a foreign library. NumPy and SciPy are open to all.
@@ -49,7 +51,7 @@ DOORS = {
     "aiohttp": ("store*",),
     "yaml": ("job*", "yaml*"), "pydantic": ("job*", "yaml*"),
     "pyarrow": ("readers*", "artifacts", "channels", "results", "tarnmoor", "tables"),
-    "click": ("cli",), "rich": ("cli", "progress"),
+    "click": ("cli",), "rich": ("screens", "progress"),
     "xxhash": ("artifacts", "gather"),
     "threadpoolctl": ("blas",),
 }  # fmt: skip
