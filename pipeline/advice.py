@@ -6,6 +6,7 @@ Only wording lives here: every figure was worked out before, and a figure that i
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
@@ -13,7 +14,7 @@ import numpy as np
 from shardfold.assess import Assessment, padded
 from shardfold.kernels.ranks import RankReason
 from shardfold.kernels.verdicts import ReadReason, Remedy, RemedyKind, Verdict
-from shardfold.quantities import format_angle
+from shardfold.quantities import format_angle, rounded_up
 
 NOISE_REASONS = (RankReason.ABOVE_NOISE, RankReason.NONE_ABOVE_NOISE)
 MOST_QUOTED = 100.0
@@ -134,7 +135,7 @@ def _remedy(remedy: Remedy, verdict: Verdict) -> str | None:
     if remedy.kind is RemedyKind.WIDER:
         return _joined("a new dossier with twice the width (design.width)", about)
     if remedy.kind is RemedyKind.GROUP:
-        state = "no bound" if remedy.degrees is None else f"known to {_angle(remedy.degrees)}"
+        state = "no bound" if remedy.degrees is None else f"known to {_angle(remedy.degrees, rounded_up)}"
         return f"use the space of the group as one: {state}"
     if remedy.kind is RemedyKind.DATA:
         return _data(remedy.factor, verdict)
@@ -206,8 +207,8 @@ def _ranges(numbers: list[int]) -> str:
     return ", ".join(str(run[0]) if len(run) == 1 else f"{run[0]}-{run[-1]}" for run in runs)
 
 
-def _angle(degrees: float) -> str:
-    return f"{degrees:.2g} deg" if degrees >= 0.001 else "less than 0.001 deg"
+def _angle(degrees: float, digits: Callable[[float], str] = "{:.2g}".format) -> str:
+    return f"{digits(degrees)} deg" if degrees >= 0.001 else "less than 0.001 deg"
 
 
 def _known(value: float) -> float | None:

@@ -167,6 +167,14 @@ def format_bytes(size_bytes: int) -> str:
     return _format(size_bytes, BYTE_UNITS)
 
 
+def rounded_up(angle_deg: float) -> str:
+    """Return an angle in degrees to two digits, never smaller than it is: for bounds."""
+    if angle_deg <= 0:
+        return "0"
+    step = 10.0 ** (math.floor(math.log10(angle_deg)) - 1)
+    return f"{math.ceil(angle_deg / step - 1e-9) * step:.2g}"
+
+
 def format_angle(angle_deg: float) -> str:
     """Return the shortest text of an angle, such as ``"5 deg"``; `parse_angle` reads it back (from 1e-12 deg on)."""
     digits = f"{Decimal(repr(float(angle_deg))):f}"

@@ -22,6 +22,7 @@ from shardfold.background_columns import rebuilt
 from shardfold.errors import InputError, RecordCorrupt
 from shardfold.ids import digest_bytes
 from shardfold.publish import CAUTION
+from shardfold.quantities import rounded_up
 from shardfold.store import Store, StoreSettings, connect
 from shardfold.tables import mode_names, read_table
 
@@ -270,8 +271,7 @@ def _bound(degrees: float | None, absent: str = "no bound") -> str:
         return absent
     if degrees < LEAST_SHOWN_DEG:
         return f"<{LEAST_SHOWN_DEG:g}"
-    step = 10.0 ** (math.floor(math.log10(degrees)) - 1)
-    return f"{math.ceil(degrees / step - 1e-9) * step:.2g}"
+    return rounded_up(degrees)
 
 
 def _sampling(degrees: float | None) -> str:
