@@ -193,8 +193,11 @@ def bounds(factors: Factors, residuals: Residuals, n_effective: float) -> Bounds
     upper = np.maximum.accumulate(np.append(raised, residuals.unseen)[::-1])[::-1].copy()
     group = _groups(squares, upper, np.minimum(left[:-1], np.diagonal(coupling, 1)), n_effective)
     sines = np.full((2, squares.size), np.nan)
+    # Nothing unseen may mix with the last mode where it is small against it and the remainder smaller still.
+    last = float(squares[-1]) - residuals.unseen if squares.size else 0.0
+    apart = last > residuals.floor and bool(residuals.left[-1] <= CLOSE * last)
     for members in _spans(group):
-        if members.stop < squares.size or residuals.unseen <= residuals.floor:
+        if members.stop < squares.size or residuals.unseen <= residuals.floor or apart:
             sines[:, members] = _group_sines(squares, raised, upper, (left, right), coupling, members).reshape(2, 1)
     sines[sines >= LARGEST_SINE] = np.nan
     return Bounds(group, sines[0], sines[1], upper)
@@ -202,8 +205,10 @@ def bounds(factors: Factors, residuals: Residuals, n_effective: float) -> Bounds
 
 def _rounding(factors: Factors, residuals: Residuals) -> Floats:
     """Return how far rounding may move a mode's eigenvalue: a floor of singular values moves it by ``2 S_i`` times."""
-    most = FLOOR_ULPS * EPS * factors.energy_total
-    return np.maximum(residuals.floor, np.minimum(2 * factors.values * factors.floor, most))
+    # The mean is known to some rounding of itself: so much of it stays in every sample.
+    left_of_mean = FLOOR_ULPS * EPS * np.sqrt(factors.n) * float(np.linalg.norm(factors.removal.mean))
+    most = FLOOR_ULPS * EPS * factors.energy_total + 2 * factors.values * left_of_mean
+    return np.asarray(np.maximum(residuals.floor, np.minimum(2 * factors.values * factors.floor, most)))
 
 
 def _check_doors(reduced: Summary, factors: Factors, checks: Checks, probe: NDArray[np.number] | None) -> None:

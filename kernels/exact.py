@@ -203,6 +203,18 @@ def moments(triangle: Triangle) -> Summary:
     return Summary(triangle.shape, triangle.n, outer=inner[:m].copy(), inner=inner, right_mean=right_mean, **same)
 
 
+def root_of(part: Triangle, removal: Removal) -> Floats:
+    """Return a factor of the products of a part's channels about the background of all, float64 (p + m + 1, m).
+
+    The products of the parts add up to those of the reduced whole; see ``background.apply``.
+    """
+    p = part.shape.p
+    step = np.sqrt(part.n) * (np.concatenate([part.mean, part.right_mean]) - removal.right_mean)
+    rows = np.vstack([np.roll(part.triangle, -p, axis=1), step])
+    root: Floats = rows[:, part.shape.x] - rows[:, removal.places] @ removal.right_weights[part.shape.x].T
+    return root
+
+
 def reduce(triangle: Triangle, *, keep_mean: bool = False, rows: Sequence[int] = ()) -> tuple[Triangle, Removal]:
     """Return the summary of what is left when the mean and some functions are removed, and what was removed.
 

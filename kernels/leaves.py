@@ -66,6 +66,27 @@ def leaf_terms(n: int, inner: Floats, shape: Shape, rows: Floats, checks: Floats
     return LeafTerms(n, inside, outside)
 
 
+def terms_of_root(n: int, root: Floats, rows: Floats, count: int) -> LeafTerms:
+    """Return the terms of one leaf where all channels are kept, from a factor of its products instead of them.
+
+    Nothing is squared before it is small, so weak modes are told beside strong ones.
+
+    Parameters
+    ----------
+    n : int
+        Samples of the leaf.
+    root : float64 (t, m)
+        ``root^T root`` are the products of the channels about the background of the whole campaign.
+    rows : float64 (k', m)
+        Row map of all modes of the whole campaign.
+    count : int
+        Leading modes wanted, r'.
+    """
+    require_between("count", count, 0, rows.shape[0])
+    series = root @ rows.T
+    return LeafTerms(n, series[:, :count].T @ series, np.zeros((0, count)))
+
+
 def join(a: LeafTerms, b: LeafTerms) -> LeafTerms:
     """Return the terms of two leaves as one."""
     return LeafTerms(a.n + b.n, a.inside + b.inside, a.outside + b.outside)

@@ -222,7 +222,7 @@ def predicted_sine(
     gaps[fellows] = np.inf
     squares = np.array([_squared_sine(scaled, counts, gaps[i], i, width, reads) for i in range(rank_whole)])
     sine = np.sqrt(fellows[:rank, :rank_whole] @ squares)
-    rounding = spectrum.floor**2 / np.maximum(spectrum.eigenvalues[:rank], np.finfo(np.float64).tiny)
+    rounding = spectrum.floor / np.sqrt(np.maximum(spectrum.eigenvalues[:rank], np.finfo(np.float64).tiny))
     return np.asarray(np.clip(np.maximum(sine, rounding), LEAST_SINE, 1.0), dtype=np.float64)
 
 

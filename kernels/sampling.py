@@ -293,7 +293,7 @@ def _north(
         samples[noise.count :] = factors.n
     tail = max(0.0, factors.energy_total - float(squares.sum()))
     north = np.full(count, np.nan)
-    for at in members:
+    for at in members if n_effective > 1 else []:
         others = np.setdiff1d(np.arange(squares.size), at)
         gap = squares[at, np.newaxis] - squares[others]
         beyond = squares[at] - _noise_level(factors, noise)

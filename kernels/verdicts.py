@@ -193,7 +193,8 @@ def read_again(
     computed = np.maximum(sine, coefficient_sine)
     within, grouped = computed <= limit, members_of(group, sine.size) > 1
     helped = ~within & ~at_noise & _gains(computed, predicted)
-    helped |= within & grouped & ~at_noise & ~held_by_sampling & (predicted_alone <= limit)
+    parted = np.where(within, predicted_alone <= limit, _gains(computed, predicted_alone))
+    helped |= grouped & ~at_noise & ~held_by_sampling & parted
     if bool((within & ~grouped).all()):
         return ReadDecision(False, ReadReason.MET)
     if exact:
@@ -201,13 +202,13 @@ def read_again(
     if helped.any():
         again = reads < most_reads
         return ReadDecision(again, ReadReason.HELPS if again else ReadReason.MOST_READS, _places(helped))
-    return _why_not(within, grouped, at_noise)
+    return _why_not(within, grouped, held_by_sampling, at_noise)
 
 
-def _why_not(within: Flags, grouped: Flags, at_noise: Flags) -> ReadDecision:
+def _why_not(within: Flags, grouped: Flags, held_by_sampling: Flags, at_noise: Flags) -> ReadDecision:
     """Return the weightiest reason not to read for modes that no read helps."""
     reasons = (
-        (ReadReason.NO_GAIN, ~within & ~grouped & ~at_noise),
+        (ReadReason.NO_GAIN, ~within & ~(grouped & held_by_sampling) & ~at_noise),
         (ReadReason.CLOSE_GROUP, grouped & ~at_noise),
         (ReadReason.AT_NOISE, at_noise),
     )

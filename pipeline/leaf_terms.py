@@ -16,39 +16,15 @@ import numpy.typing as npt
 from shardfold import artifacts, layout
 from shardfold.design import Design
 from shardfold.kernels.background import Removal
-from shardfold.kernels.leaves import LeafTerms, join, leaf_terms
+from shardfold.kernels.leaves import LeafTerms, join
 from shardfold.kernels.whole import Shape
 from shardfold.plan import MOST_TERMS, Cell, by_leaf
 from shardfold.store import Store
-from shardfold.summaries import right_arrays_of, right_products
+from shardfold.summaries import ModeMap, right_arrays_of, terms_of
 
 Array = npt.NDArray[Any]
 
 LEAVES_A_TASK = 16
-
-
-@dataclass(frozen=True, eq=False)
-class ModeMap:
-    """How the stack's products become those of the modes; small, whatever the number of channels.
-
-    Attributes
-    ----------
-    shape : Shape
-    removal : Removal
-        Of the whole, without its channels.
-    rows : ndarray (k', k)
-        Row map of all modes.
-    checks : ndarray (q, k')
-        Theta times the modes.
-    count : int
-        Leading modes that are looked at.
-    """
-
-    shape: Shape
-    removal: Removal
-    rows: Array
-    checks: Array
-    count: int
 
 
 @dataclass(frozen=True)
@@ -100,14 +76,12 @@ def _joined(
 
 
 def _terms(store: Store, design: Design, task: TakeTerms, leaf: int, name: str) -> LeafTerms:
-    mapping, key = task.mapping, layout.cell_key(task.read, leaf, name)
+    key = layout.cell_key(task.read, leaf, name)
     header = artifacts.read_header(store, key, "cell")
     # One ranged read from the first array to the last: the large one between is spared, as n is in the header too.
     names = [name for name in right_arrays_of(design) if name != "n" or design.exact]
     arrays = artifacts.read_arrays(store, key, header, names)
-    n = int(header.facts["n"])
-    inner = right_products(design, mapping.shape, {"n": np.array(n), **arrays}, mapping.removal)
-    return leaf_terms(n, inner, mapping.shape, mapping.rows, mapping.checks, mapping.count)
+    return terms_of(design, {"n": np.array(header.facts["n"]), **arrays}, task.mapping)
 
 
 def _runs(items: Sequence[Any], length: int) -> Iterator[tuple[Any, ...]]:

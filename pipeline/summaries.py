@@ -6,19 +6,47 @@ A design says which one its dossier keeps; everyone else asks here and need not 
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from typing import Any, TypeAlias
 
 import numpy.typing as npt
 
 from shardfold.design import Design
-from shardfold.kernels import background, cost, exact, factors, whole
+from shardfold.kernels import background, cost, exact, factors, leaves, whole
 from shardfold.kernels.background import Removal
 from shardfold.kernels.blocks import Preparation
 from shardfold.kernels.exact import Triangle
 from shardfold.kernels.factors import Factors
+from shardfold.kernels.leaves import LeafTerms
 from shardfold.kernels.whole import Probe, Shape, Summary, XBlock
 
 Array = npt.NDArray[Any]
+
+
+@dataclass(frozen=True, eq=False)
+class ModeMap:
+    """How the products of a part's stack become those of the modes; small, whatever the number of channels.
+
+    Attributes
+    ----------
+    shape : Shape
+    removal : Removal
+        Of the whole, without its channels.
+    rows : ndarray (k', k)
+        Row map of all modes.
+    checks : ndarray (q, k')
+        Theta times the modes.
+    count : int
+        Leading modes that are looked at.
+    """
+
+    shape: Shape
+    removal: Removal
+    rows: Array
+    checks: Array
+    count: int
+
+
 AnySummary: TypeAlias = Summary | Triangle
 
 WHOLE_ARRAYS = ("n", "mean", "energy", "outer", "inner", "right_mean", "low", "high", "gaps")
@@ -97,22 +125,24 @@ def finish(summary: AnySummary, *, keep_mean: bool, rows: Sequence[int]) -> tupl
     return (None if summary.shape.identity else reduced), made
 
 
-def right_products(design: Design, shape: Shape, arrays: Mapping[str, Array], removal: Removal) -> Array:
-    """Return the products of the stack of a stored part about the background of all, float64 (s, s).
+def terms_of(design: Design, arrays: Mapping[str, Array], mapping: ModeMap) -> LeafTerms:
+    """Return the leaf terms of a stored part.
 
     Parameters
     ----------
-    design, shape
-        What kind of summary, and its sizes.
+    design : Design
+        What kind of summary.
     arrays : mapping
         Those that ``right_arrays_of`` names.
-    removal : Removal
-        Of the whole; nothing that is as long as the channels is needed.
+    mapping : ModeMap
+        Of the whole.
     """
-    if not design.exact:
-        return background.apply(int(arrays["n"]), arrays["right_mean"], arrays["inner"], removal)
-    part = exact.moments(exact.from_arrays(shape, arrays))
-    return background.apply(part.n, part.right_mean, part.inner, removal)
+    n, removal = int(arrays["n"]), mapping.removal
+    if design.exact:
+        root = exact.root_of(exact.from_arrays(mapping.shape, arrays), removal)
+        return leaves.terms_of_root(n, root, mapping.rows, mapping.count)
+    inner = background.apply(n, arrays["right_mean"], arrays["inner"], removal)
+    return leaves.leaf_terms(n, inner, mapping.shape, mapping.rows, mapping.checks, mapping.count)
 
 
 def term_energies(summary: AnySummary, groups: Sequence[Sequence[int]], *, keep_mean: bool) -> Array:

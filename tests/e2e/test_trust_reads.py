@@ -108,7 +108,6 @@ def no_executor() -> Executor:
 CASES = {
     "angle, one read": ("quick", {"rank": {"angle": "2 deg"}}, 1),
     "angle, two reads": ("steady", {"rank": {"angle": "2 deg"}}, 2),
-    "rank, two reads": ("quick", {"rank": 5}, 2),
     "rank, three reads": ("slow", {"rank": 3}, 3),
 }
 

@@ -348,7 +348,7 @@ def decide(
         ((1, 1), (0.1, 0.1), {"group": (0, 0), "alone": (1, 1)}, True, ReadReason.HELPS, (0, 1)),
         ((1, 1), (0.1, 0.1), {"group": (0, 0), "held": (0, 1)}, False, ReadReason.CLOSE_GROUP, (0, 1)),
         ((9, 9), (0.1, 0.1), {"group": (0, 0), "held": (0, 1)}, True, ReadReason.HELPS, (0, 1)),
-        ((NAN, NAN), (70, 70), {"group": (0, 0)}, False, ReadReason.CLOSE_GROUP, (0, 1)),
+        ((NAN, NAN), (70, 70), {"group": (0, 0)}, False, ReadReason.NO_GAIN, (0, 1)),
         ((1, 1), (0.1, 0.1), {"group": (0, 1, 1), "alone": (1, 80)}, False, ReadReason.CLOSE_GROUP, (1,)),
         ((1, 1), (NAN, NAN), {"group": (0, 0)}, False, ReadReason.CLOSE_GROUP, (0, 1)),
         ((), (), {}, False, ReadReason.MET, ()),
