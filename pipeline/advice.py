@@ -17,6 +17,7 @@ from shardfold.kernels.verdicts import ReadReason, Remedy, RemedyKind, Verdict
 from shardfold.quantities import format_angle, rounded_up
 
 NOISE_REASONS = (RankReason.ABOVE_NOISE, RankReason.NONE_ABOVE_NOISE)
+LEAST_QUOTED_DEG = 0.001
 MOST_QUOTED = 100.0
 """A campaign longer than so many times the present one is not quoted: angles that large only say it is too short."""
 
@@ -127,9 +128,7 @@ def _accuracy(judged: Assessment) -> list[dict[str, Any]]:
 
 
 def _remedy(remedy: Remedy, verdict: Verdict) -> str | None:
-    about = None if remedy.degrees is None else f"about {_angle(remedy.degrees)}"
-    if remedy.at_least and about is not None:
-        about = f"{about} or better"
+    about = _expected(remedy)
     if remedy.kind is RemedyKind.READ:
         return _joined("one more read (modes.reads)", about)
     if remedy.kind is RemedyKind.WIDER:
@@ -142,6 +141,14 @@ def _remedy(remedy: Remedy, verdict: Verdict) -> str | None:
     if verdict is Verdict.UNRESOLVED:
         return "nothing in sight: neither another read nor twice the width is expected to help"
     return None
+
+
+def _expected(remedy: Remedy) -> str | None:
+    if remedy.degrees is None:
+        return None
+    if remedy.degrees < LEAST_QUOTED_DEG:
+        return _angle(remedy.degrees)
+    return f"about {_angle(remedy.degrees)}{' or better' if remedy.at_least else ''}"
 
 
 def _data(factor: float | None, verdict: Verdict) -> str:
@@ -168,12 +175,12 @@ def _remedy_of_all(judged: Assessment, concerned: list[int]) -> str:
 
 def _rank_remarks(judged: Assessment) -> list[str]:
     choice, more = judged.choice, judged.modes_after_a_read
-    if judged.held and not judged.told[-1]:
-        return []
+    if (judged.held and not judged.told[-1]) or judged.rank > judged.held:
+        return []  # said already
     if choice.reason is RankReason.WITHIN_ANGLE and more > choice.rank:
         return [f"one more read is expected to bring {more} modes within {format_angle(choice.asked)}"]
     if choice.reason in (RankReason.GROUP_WHOLE, RankReason.GROUP_OPEN, RankReason.FEWER_MODES) or not choice.met:
-        return [f"{choice.rank} modes: {choice.reason.value}"]
+        return [f"{choice.rank} mode{'' if choice.rank == 1 else 's'}: {choice.reason.value}"]
     return []
 
 
@@ -208,7 +215,9 @@ def _ranges(numbers: list[int]) -> str:
 
 
 def _angle(degrees: float, digits: Callable[[float], str] = "{:.2g}".format) -> str:
-    return f"{digits(degrees)} deg" if degrees >= 0.001 else "less than 0.001 deg"
+    if degrees < LEAST_QUOTED_DEG:
+        return f"less than {LEAST_QUOTED_DEG:g} deg"
+    return f"{digits(degrees)} deg"
 
 
 def _known(value: float) -> float | None:

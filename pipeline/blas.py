@@ -9,24 +9,39 @@ from __future__ import annotations
 import os
 from collections.abc import Iterator
 from contextlib import contextmanager
+from functools import cache
 
-from threadpoolctl import threadpool_info, threadpool_limits
+import numpy as np
+import scipy.linalg
+from threadpoolctl import ThreadpoolController
 
 from shardfold.errors import ClusterFailed
 
 CORE_VARIABLE = "OPENBLAS_CORETYPE"
 
 
+LINKED = (np, scipy.linalg)
+"""Whose libraries are meant: each comes with one of its own, and both are loaded once these are imported."""
+
+
+@cache
+def _libraries() -> ThreadpoolController:
+    """Return the libraries of this process; looking for them takes milliseconds, so it is done once."""
+    return ThreadpoolController()
+
+
+@cache
 def core_type() -> str:
     """Return the names of the BLAS kernels of this process, such as ``Haswell``; more than one is joined by ``+``."""
-    names = {str(i.get("architecture") or i["internal_api"]) for i in threadpool_info() if i["user_api"] == "blas"}
+    found = _libraries().info()
+    names = {str(i.get("architecture") or i["internal_api"]) for i in found if i["user_api"] == "blas"}
     return "+".join(sorted(names)) or "unknown"
 
 
 @contextmanager
 def one_thread() -> Iterator[None]:
     """Let BLAS use one thread within the context, so that sums have one order."""
-    with threadpool_limits(1, user_api="blas"):
+    with _libraries().limit(limits=1, user_api="blas"):
         yield
 
 

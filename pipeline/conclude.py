@@ -91,9 +91,10 @@ def _write(
         blocked_by_vanished(intake, done.cells)  # the coefficients are read again
     finding = finding_of(site.dossier, judged)
     rows = intake.rows_of(done.read)
-    parts, spectrum = write_parts(
+    parts, spectrum, bytes_read = write_parts(
         finding, done.shape, done.cells, rows, prefix, site.workplace, intake.executor, intake.listen
     )
+    intake.bytes_read += bytes_read
     files = put_all(site.dossier.store, prefix, result_tables(finding, spectrum.dominant_hz()))
     return files | {key.removeprefix(prefix): digest for key, digest in parts}, quality(finding)
 

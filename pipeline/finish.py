@@ -67,7 +67,7 @@ def write_parts(
     workplace: Workplace,
     executor: Executor,
     listen: Listener,
-) -> tuple[list[tuple[str, str]], Spectrum]:
+) -> tuple[list[tuple[str, str]], Spectrum, int]:
     """Have the coefficients written, one part per leaf that has samples, and return the parts in order of time.
 
     Returns
@@ -76,6 +76,8 @@ def write_parts(
         In order of time.
     spectrum : Spectrum
         Of all coefficients.
+    bytes_read : int
+        What was read of the campaign.
     """
     segment = _segment(rows_of) if workplace.design.timed else 0
     mapping, groups = coefficient_map(finding, shape), tuple(group_names(finding.judged))
@@ -95,13 +97,14 @@ def write_parts(
     ]
     again = sum(cell.stored_bytes for cell in cells) if shape.identity else 0
     listen(StageStarted("coefficients", len(tasks), again))
-    parts = []
+    parts, bytes_read = [], 0
     spectrum = Spectrum(finding.rank, segment)
     for outcome in _in_order(executor.perform(workplace, tasks), tasks, listen):
         parts.append((outcome.key, outcome.digest))
         spectrum.add(outcome)
+        bytes_read += outcome.bytes_read
     listen(StageDone("coefficients"))
-    return parts, spectrum
+    return parts, spectrum, bytes_read
 
 
 def _in_order(
