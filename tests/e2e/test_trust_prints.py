@@ -110,7 +110,7 @@ def test_singular_values_under_the_rounding_floor_are_blank(reads: int, tmp_path
     assert "mode_04" in result.modes.column_names
     assert result.modes.column("mode_04").null_count == CHANNELS
     assert np.isfinite(np.array([c.to_numpy() for c in result.rebuild().columns[1:]])).all()
-    assert "3 modes: fewer modes were computed" in result.next_step
+    assert "under the rounding floor and left blank: 4" in result.next_step
 
 
 def test_modes_at_noise_have_no_angle_and_no_group(tmp_path: Path) -> None:
