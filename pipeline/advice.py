@@ -45,7 +45,7 @@ def remedy_words(judged: Assessment) -> list[str | None]:
 
 
 def next_step(judged: Assessment) -> str:
-    """Return what to do next, in a line: the state of the whole, then the remedy of the first mode that needs one."""
+    """Return what to do next, in a line: the state of the whole, then what the most demanding modes need."""
     verdicts = [judgement.verdict for judgement in judged.judgements]
     good, count = verdicts.count(Verdict.RESOLVED), len(verdicts)
     tolerance = format_angle(judged.tolerance_deg)

@@ -105,6 +105,7 @@ class Assessment:
         return padded(np.degrees(np.arcsin(np.minimum(held, 1.0))), self.rank)
 
 
+@one_thread()  # else bits of products would depend on this machine's processors
 def assess(site: Site, intake: Intake, done: Pass) -> Assessment:
     """Return what can be said of the modes of a read.
 
@@ -117,8 +118,7 @@ def assess(site: Site, intake: Intake, done: Pass) -> Assessment:
     modes, design = site.job.modes, site.dossier.design
     periods = [term for term in modes.remove if isinstance(term, int)]
     rows = design.terms.rows("trend" in modes.remove, periods)
-    with one_thread():
-        reduced, factors = finish(summary, keep_mean="mean" not in modes.remove, rows=rows)
+    reduced, factors = finish(summary, keep_mean="mean" not in modes.remove, rows=rows)
     if not len(factors.values):
         raise _nothing_varies(summary, factors)
     checks, left = _residuals(site, done, reduced, factors)
@@ -128,12 +128,11 @@ def assess(site: Site, intake: Intake, done: Pass) -> Assessment:
         factors.values, left.right_estimate, energy, len(energy), factors.n, removed,
         modes=factors.modes, floor=factors.floor,
     )  # fmt: skip
-    with one_thread():
-        told = sampling(terms, factors, noise)
-        samples = told.n_effective if np.isfinite(told.n_effective) else float(factors.n)
-        found = bounds(factors, left, samples)
-        told = sampling(terms, factors, noise, found.group)
-        ahead = _predictions(done, factors, left, checks, found.group)
+    told = sampling(terms, factors, noise)
+    samples = told.n_effective if np.isfinite(told.n_effective) else float(factors.n)
+    found = bounds(factors, left, samples)
+    told = sampling(terms, factors, noise, found.group)
+    ahead = _predictions(done, factors, left, checks, found.group)
     choice = _choice(modes.rank, design.most_modes(modes.rank), factors, found, noise)
     return _judged(site, done, summary, factors, found, told, noise, choice, ahead, samples)
 
@@ -168,8 +167,7 @@ def _residuals(
     theta = normals(dossier.design.seed, STREAM_CHECK, name_keys(dossier.table.names), shape.q_theta)
     checks = Checks(reduced.outer[:, shape.theta], theta)
     probe = np.load(io.BytesIO(dossier.store.read(layout.probe_key(done.read))), allow_pickle=False)
-    with one_thread():
-        return checks, residuals(reduced, factors, checks, probe)
+    return checks, residuals(reduced, factors, checks, probe)
 
 
 def _leaf_terms(

@@ -16,7 +16,7 @@ from typing import Any
 
 from shardfold import layout
 from shardfold.assess import Assessment
-from shardfold.blas import core_type
+from shardfold.blas import core_type, one_thread
 from shardfold.events import Published
 from shardfold.finish import finding_of, write_parts
 from shardfold.gather import moment
@@ -83,6 +83,7 @@ def standing(site: Site, intake: Intake, probes: Sequence[str]) -> Conclusion | 
     return Conclusion(place, False, len(probes))
 
 
+@one_thread()
 def _write(
     site: Site, intake: Intake, done: Pass, judged: Assessment, prefix: str
 ) -> tuple[dict[str, str], dict[str, Any]]:
