@@ -112,10 +112,12 @@ def assess(site: Site, intake: Intake, done: Pass) -> Assessment:
     Raises
     ------
     InputError
-        If nothing varies: no mode lies above the rounding floor.
+        If nothing varies: no mode lies above the rounding floor. If more modes are asked for than there are samples.
     """
     summary = sum_of(site, intake, done)
     modes, design = site.job.modes, site.dossier.design
+    if isinstance(modes.rank, int) and modes.rank > summary.n:
+        raise too_few_samples(modes.rank, summary.n)
     periods = [term for term in modes.remove if isinstance(term, int)]
     rows = design.terms.rows("trend" in modes.remove, periods)
     reduced, factors = finish(summary, keep_mean="mean" not in modes.remove, rows=rows)
@@ -141,6 +143,17 @@ def sum_of(site: Site, intake: Intake, done: Pass) -> AnySummary:
     """Return the sum of all cells of a read."""
     return add_all(
         site.dossier.store, site.workplace, intake.executor, intake.listen, done.read, done.shape, done.cells
+    )
+
+
+def too_few_samples(rank: int, samples: int) -> InputError:
+    """Return the error for more modes than samples."""
+    return InputError(
+        "more modes are asked for than there are samples",
+        where="modes.rank",
+        rule=f"at most the number of samples, {samples}",
+        got=str(rank),
+        remedy=f"--set modes.rank={max(1, samples - 1)} or less",
     )
 
 

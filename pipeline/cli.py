@@ -22,7 +22,7 @@ import click
 
 from shardfold import demo as demonstration
 from shardfold.decisions import Decision, readmit, withdraw
-from shardfold.errors import InputError, JobInvalid, ShardfoldError, Stopped
+from shardfold.errors import InputError, JobInvalid, RecordCorrupt, ShardfoldError, Stopped
 from shardfold.executor import Executor, SerialExecutor
 from shardfold.forecast import forecast
 from shardfold.history import result_rows, shard_rows
@@ -30,8 +30,9 @@ from shardfold.job import Job, load_job
 from shardfold.progress import Teller
 from shardfold.results import open_result
 from shardfold.run import Report, run
-from shardfold.screens import closeness_text, forecast_text, ledger_text, result_text, results_text
+from shardfold.screens import closeness_text, forecast_text, ledger_text, result_text, results_text, verification_text
 from shardfold.site import local_places, open_dossier
+from shardfold.verify import verify
 
 F = TypeVar("F", bound=Callable[..., Any])
 
@@ -136,6 +137,21 @@ def results_command(dossier: str, endpoint: str | None, as_json: bool, quiet: bo
         _emit({"results": [asdict(row) for row in rows]})
     else:
         click.echo(results_text(rows))
+
+
+@commands.command("verify")
+@click.argument("dossier")
+@click.option("--endpoint", default=None, help="S3 endpoint (or AWS_ENDPOINT_URL).")
+@_common
+def verify_command(dossier: str, endpoint: str | None, as_json: bool, quiet: bool) -> None:
+    """Assert every digest and invariant of a DOSSIER (a job file or a location) anew from storage."""
+    found = verify(open_dossier(dossier, endpoint, sound=False))
+    if as_json:
+        _emit(asdict(found))
+    elif found.faults or not quiet:
+        click.echo(verification_text(found))
+    if found.faults:
+        sys.exit(RecordCorrupt.exit_status)
 
 
 def _deciding(function: F) -> F:

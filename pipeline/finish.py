@@ -13,7 +13,6 @@ from shardfold.advice import group_names
 from shardfold.assess import Assessment
 from shardfold.blas import one_thread
 from shardfold.dossier import Dossier, npy_bytes
-from shardfold.errors import InputError
 from shardfold.events import Listener, StageDone, StageStarted, TaskDone
 from shardfold.executor import Executor
 from shardfold.kernels.addressed import name_keys
@@ -37,17 +36,6 @@ EVEN_STEP_TOLERANCE = 1e-3
 def finding_of(dossier: Dossier, judged: Assessment) -> Finding:
     """Return what was found of a sum, ready to be published."""
     return Finding(dossier.table, _factor(dossier), judged, dossier.design.terms, _unit(dossier))
-
-
-def too_few_samples(rank: int, samples: int) -> InputError:
-    """Return the error for more modes than samples."""
-    return InputError(
-        "more modes are asked for than there are samples",
-        where="modes.rank",
-        rule=f"at most the number of samples, {samples}",
-        got=str(rank),
-        remedy=f"--set modes.rank={max(1, samples - 1)} or less",
-    )
 
 
 def write_probe(dossier: Dossier, summary: AnySummary, rank: int, read: int) -> None:

@@ -1,6 +1,7 @@
 """The ledger: numbered commits, each a small change, of which shards are in and which cells hold them.
 
-A commit is one conditional create, so two writers cannot both have a number. It ends in one of three ways: landed,
+A commit is one conditional create, so two writers cannot both have a number. It carries its own digest and that of the
+one before. It ends in one of three ways: landed,
 refused (another writer took the number), or unknown (the answer was lost; the token in the body, read back, tells).
 State is the replay of all commits. Corrections and checkpoints have room as further fields of a delta; a reader refuses
 a format newer than its own.
@@ -17,7 +18,7 @@ from typing import Any, Literal
 
 from shardfold import layout
 from shardfold.errors import RecordCorrupt, WriterConflict
-from shardfold.ids import ObjectInfo, RowGroup, Shard, canonical_json, digest_bytes
+from shardfold.ids import ObjectInfo, RowGroup, Shard, canonical_json, digest_bytes, digest_value
 from shardfold.store import Created, Store
 
 FORMAT = 2
@@ -122,6 +123,9 @@ def apply_commit(ledger: Ledger, body: bytes, number: int) -> Ledger:
         commit = json.loads(body)
         if commit["format"] != FORMAT:
             raise _corrupt(key, f"format {FORMAT}", str(commit["format"]))
+        digest = digest_value({name: value for name, value in commit.items() if name != "digest"})
+        if commit["digest"] != digest:
+            raise _corrupt(key, f"digest {commit['digest']}", digest)
         if commit["number"] != number or commit["parent"] != ledger.head:
             raise _corrupt(key, f"commit {number} on {ledger.head!r}", f"{commit['number']} on {commit['parent']!r}")
         shards = {record["key"]: _entry(record) for record in commit["shards"]}
@@ -142,21 +146,20 @@ def commit(store: Store, ledger: Ledger, delta: Delta, software: str) -> Ledger:
     if not delta:
         return ledger
     number = ledger.number + 1
-    body = canonical_json(
-        {
-            "format": FORMAT,
-            "number": number,
-            "parent": ledger.head,
-            "token": uuid.uuid4().hex,
-            "written": datetime.now(UTC).isoformat(timespec="seconds"),
-            "software": software,
-            "shards": [_record(entry) for entry in delta.shards],
-            "leaves": [
-                {"read": read, "leaf": leaf, "cells": list(state.cells), "rows": state.rows}
-                for (read, leaf), state in delta.leaves.items()
-            ],
-        }
-    )
+    record = {
+        "format": FORMAT,
+        "number": number,
+        "parent": ledger.head,
+        "token": uuid.uuid4().hex,
+        "written": datetime.now(UTC).isoformat(timespec="seconds"),
+        "software": software,
+        "shards": [_record(entry) for entry in delta.shards],
+        "leaves": [
+            {"read": read, "leaf": leaf, "cells": list(state.cells), "rows": state.rows}
+            for (read, leaf), state in delta.leaves.items()
+        ],
+    }
+    body = canonical_json(record | {"digest": digest_value(record)})
     key = layout.commit_key(number)
     if store.create(key, body) is not Created.LANDED and bytes(store.read(key)) != body:
         raise WriterConflict(

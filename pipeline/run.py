@@ -16,13 +16,13 @@ from typing import Any
 
 from shardfold import budget, dossier, layout
 from shardfold.advice import reading_words
-from shardfold.assess import Assessment, assess, sum_of
+from shardfold.assess import Assessment, assess, sum_of, too_few_samples
 from shardfold.conclude import Conclusion, conclude, standing
 from shardfold.design import Design, expected_rank
 from shardfold.errors import InputError, PlanRefused, RecordCorrupt
 from shardfold.events import Listener, Noted
 from shardfold.executor import Deferred, Executor
-from shardfold.finish import too_few_samples, write_probe
+from shardfold.finish import write_probe
 from shardfold.ingest import Intake, Pass, bring_in
 from shardfold.job import Job
 from shardfold.job_values import MOST_READS

@@ -17,6 +17,7 @@ from shardfold.budget import MIB
 from shardfold.history import ResultRow, ShardRow
 from shardfold.publish import CAUTION
 from shardfold.results import Result, mode_rows
+from shardfold.verify import Verification
 
 READING = (
     "Accuracy: at most this far from the exact mode of these data (computation). Sampling: how far the exact mode may "
@@ -51,6 +52,15 @@ def ledger_text(number: int, rows: Sequence[ShardRow], everything: bool) -> str:
         for row in shown
     ]  # fmt: skip
     return _rendered(heading, _table(head, cells, left=("shard", "state", "why", "by")) if cells else None, ())
+
+
+def verification_text(found: Verification) -> str:
+    """Return what was looked at, and every fault."""
+    looked = f"{found.commits} commits, {found.cells} cells, {found.sums} sums, {found.results} results"
+    if not found.faults:
+        return f"sound: {looked}"
+    faults = [f"{fault.where}\n  rule: {fault.rule}\n  got: {fault.got}" for fault in found.faults]
+    return "\n".join([f"{len(faults)} fault{'' if len(faults) == 1 else 's'} in {looked}", *faults])
 
 
 def results_text(rows: Sequence[ResultRow]) -> str:

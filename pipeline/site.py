@@ -13,7 +13,7 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 
 from shardfold import dossier as dossiers
-from shardfold import ledger
+from shardfold import layout, ledger
 from shardfold.allocator import lean_memory
 from shardfold.channels import ChannelTable
 from shardfold.dossier import Dossier
@@ -81,8 +81,8 @@ def settings(job: Job, which: str) -> StoreSettings:
     return StoreSettings(place.location, place.storage.endpoint, place.storage.region, place.storage.anonymous)
 
 
-def open_dossier(place: str, endpoint: str | None) -> Store:
-    """Return the store of a dossier that is named by a job file or by its location.
+def open_dossier(place: str, endpoint: str | None, *, sound: bool = True) -> Store:
+    """Return the store of a dossier that is named by a job file or by its location; ``sound``: its design is read.
 
     Raises
     ------
@@ -94,7 +94,7 @@ def open_dossier(place: str, endpoint: str | None) -> Store:
     else:
         settled = StoreSettings(place, endpoint)
     store = connect(settled)
-    if dossiers.load(store) is None:
+    if (dossiers.load(store) if sound else store.head(layout.DESIGN)) is None:
         raise InputError(
             "there is no dossier",
             where=place,

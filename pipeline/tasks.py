@@ -199,15 +199,22 @@ def read_cell(workplace: Workplace, task: ReadCell) -> CellRead:
 
 def add_up(workplace: Workplace, task: AddUp) -> Added:
     """Sum a run of children in the order of the full binary tree over their numbers."""
-    store = _desk(workplace).dossier
-    node = task.node
-    bottom = node.level == 0
+    store, node = _desk(workplace).dossier, task.node
+    total = sum_of_children(store, workplace.design, task)
+    record = artifacts.pack("sum", {"n": total.n, "level": node.level, "index": node.index}, to_arrays(total))
+    store.create(layout.node_key(task.read, node.name), record)
+    return Added()
+
+
+def sum_of_children(store: Store, design: Design, task: AddUp) -> AnySummary:
+    """Return the sum of a node's children, from storage."""
+    bottom = task.node.level == 0
 
     def load(number: int, names: tuple[str, ...]) -> AnySummary:
         total: AnySummary | None = None
         for name in names:
             key = layout.cell_key(task.read, number, name) if bottom else layout.node_key(task.read, name)
-            part = load_summary(store, key, "cell" if bottom else "sum", workplace.design, task.shape)
+            part = load_summary(store, key, "cell" if bottom else "sum", design, task.shape)
             if total is None:
                 total = part
             else:
@@ -215,10 +222,7 @@ def add_up(workplace: Workplace, task: AddUp) -> Added:
         assert total is not None
         return total
 
-    total = dyadic_sum(dict(node.children), load)
-    record = artifacts.pack("sum", {"n": total.n, "level": node.level, "index": node.index}, to_arrays(total))
-    store.create(layout.node_key(task.read, node.name), record)
-    return Added()
+    return dyadic_sum(dict(task.node.children), load)
 
 
 def dyadic_sum(

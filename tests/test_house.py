@@ -40,6 +40,7 @@ LAYERS = (
     "conclude",
     "run forecast",
     "results history",
+    "verify",
     "screens",
     "tarnmoor demo progress cli __init__ __main__",
 )
