@@ -85,12 +85,15 @@ def check_command(
 
 @commands.command("run")
 @_of_job
+@click.option("--prune", type=click.IntRange(1), default=None, metavar="N", help="Take out exactly N vanished shards.")
 @_common
-def run_command(job: Path, overrides: tuple[str, ...], endpoint: str | None, as_json: bool, quiet: bool) -> None:
+def run_command(
+    job: Path, overrides: tuple[str, ...], endpoint: str | None, prune: int | None, as_json: bool, quiet: bool
+) -> None:
     """Do what is outstanding, and only that. Safe to repeat, to kill, to start twice."""
     settings = load_job(job, overrides, endpoint)
     with Teller(quiet) as teller:
-        report = run(settings, lambda: make_executor(settings), teller)
+        report = run(settings, lambda: make_executor(settings), teller, prune)
     if as_json:
         _emit(asdict(report))
     else:

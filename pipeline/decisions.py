@@ -59,6 +59,26 @@ def readmit(store: Store, keys: Sequence[str], because: str, software: str) -> D
     return _decide(store, keys, because, software, "readmitted", lambda entry: entry.state == "withdrawn")
 
 
+def prune(store: Store, vanished: Sequence[str], count: int, software: str) -> Decision:
+    """Take out shards that are in but no longer listed; exactly as many as were expected, or none.
+
+    Raises
+    ------
+    InputError
+        If another number has vanished.
+    """
+    if len(vanished) != count:
+        raise InputError(
+            "another number of shards has vanished than was to be taken out",
+            where="--prune",
+            rule=f"the number of shards that are in but not listed, {len(vanished)}",
+            got=str(count),
+            remedy="look at the campaign first: 'shardfold check JOB' counts them" if vanished else "leave --prune out",
+        )
+    because = f"not listed any more; taken out with --prune {count}"
+    return _decide(store, vanished, because, software, "vanished", lambda entry: entry.state in ("in", "readmitted"))
+
+
 def _decide(
     store: Store, keys: Sequence[str], because: str, software: str, state: State, due: Callable[[Entry], bool]
 ) -> Decision:

@@ -64,7 +64,7 @@ def result_rows(store: Store) -> list[ResultRow]:
 
 
 def _shard_row(entry: Entry) -> ShardRow:
-    why = entry.why.get("reason", "") if entry.state in ("withdrawn", "readmitted") else found_in(entry)
+    why = entry.why.get("reason", "") if entry.state in ("withdrawn", "readmitted", "vanished") else found_in(entry)
     first, last = (None if time is None else moment(time) for time in (entry.first, entry.last))
     author, when = entry.why.get("author", ""), entry.why.get("when", "")
     return ShardRow(entry.key, entry.version, entry.state, entry.rows, first, last, why, author, when)

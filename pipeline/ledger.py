@@ -22,14 +22,15 @@ from shardfold.ids import ObjectInfo, RowGroup, Shard, canonical_json, digest_by
 from shardfold.store import Created, Store
 
 FORMAT = 2
-State = Literal["in", "refused", "withdrawn", "readmitted"]
+State = Literal["in", "refused", "withdrawn", "readmitted", "vanished"]
 
 
 @dataclass(frozen=True)
 class Entry:
     """What the ledger says of one shard version.
 
-    A withdrawn shard is out until it is readmitted; then it is in as soon as a run has taken it in. ``why`` says what
+    A withdrawn shard is out until it is readmitted; then it is in as soon as a run has taken it in. A vanished one was
+    no longer listed and taken out by decision; it comes in again if it is listed again. ``why`` says what
     is wrong with a refused shard, and who decided what for which reason of a withdrawn one.
 
     ``shard`` is what its footer said, kept so that no footer is read twice; ``first``, ``last``, ``rows`` and

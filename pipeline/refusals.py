@@ -85,7 +85,7 @@ def beside_vanished(shard: Shard, gone: str) -> ShardRefused:
         rival=gone,
         rule="to add it, all small shards of its leaf are read again",
         got=f"{gone} is not listed any more",
-        remedy=f"put {gone} back under its name, then run again",
+        remedy=f"put {gone} back under its name, or take it out with --prune, then run again",
     )
 
 
@@ -96,7 +96,7 @@ def vanished(cell: Cell, gone: Sequence[str]) -> InputError:
         where=gone[0],
         rule=f"the shards of leaf {cell.leaf}, read {cell.read}, are still in the campaign",
         got=f"{len(gone)} of them {'is' if len(gone) == 1 else 'are'} not listed any more",
-        remedy="put the shard back under its name, or start a new dossier without it",
+        remedy="put the shard back under its name, or take it out with 'shardfold run JOB --prune N'",
     )
 
 

@@ -18,6 +18,7 @@ from shardfold import budget, dossier, layout
 from shardfold.advice import reading_words
 from shardfold.assess import Assessment, assess, sum_of, too_few_samples
 from shardfold.conclude import Conclusion, conclude, standing
+from shardfold.decisions import prune as take_out
 from shardfold.design import Design, expected_rank
 from shardfold.errors import InputError, PlanRefused, RecordCorrupt
 from shardfold.events import Listener, Noted
@@ -63,7 +64,7 @@ class Report:
     quality: dict[str, Any] = field(default_factory=dict)
 
 
-def run(job: Job, make_executor: Callable[[], Executor], listen: Listener) -> Report:
+def run(job: Job, make_executor: Callable[[], Executor], listen: Listener, prune: int | None = None) -> Report:
     """Do what is outstanding for a job, and only that.
 
     Parameters
@@ -74,6 +75,8 @@ def run(job: Job, make_executor: Callable[[], Executor], listen: Listener) -> Re
         Returns the executor; called before the first task, so a run with nothing to do starts no engine.
     listen : Listener
         Told every event.
+    prune : int, optional
+        Take out first so many shards that are in but no longer listed: exactly as many as there are.
 
     Raises
     ------
@@ -82,6 +85,9 @@ def run(job: Job, make_executor: Callable[[], Executor], listen: Listener) -> Re
     """
     started = datetime.now(UTC)
     site = look(job, listen)
+    if prune is not None:
+        take_out(site.dossier.store, site.vanished, prune, version("shardfold"))
+        site = look(job, listen)
     executor = Deferred(make_executor)
     try:
         check_shards(site)

@@ -64,6 +64,11 @@ class Site:
     source_names: tuple[str, ...]
 
     @property
+    def vanished(self) -> list[str]:
+        """Return the shards that are in and neither listed nor being replaced just now."""
+        return sorted(self.absent - set(self.inventory.unsettled))
+
+    @property
     def workplace(self) -> Workplace:
         """Return what every task needs to know."""
         return Workplace(

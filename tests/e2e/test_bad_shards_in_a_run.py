@@ -268,7 +268,7 @@ def test_a_shard_that_vanished_and_is_needed_again(desk: Desk, monkeypatch: pyte
     assert desk.run("--quiet").status == 4
     answer = desk.run("--quiet")
     assert answer.status == 2
-    answer.says(f"{KEYS[BAD]}: a shard that is in has vanished", "put the shard back", "or start a new dossier")
+    answer.says(f"{KEYS[BAD]}: a shard that is in has vanished", "put the shard back", "--prune N")
     desk.write(KEYS[BAD], good(BAD))
     assert desk.run("--quiet").status == 0
     desk.assert_holds(field())
