@@ -16,6 +16,7 @@ from shardfold.kernels.ranks import RankReason
 from shardfold.kernels.verdicts import ReadReason, Remedy, RemedyKind, Verdict
 from shardfold.quantities import format_angle, rounded_up
 
+TOLD_REASONS = (RankReason.GROUP_WHOLE, RankReason.GROUP_OPEN, RankReason.GROUP_LONG)
 NOISE_REASONS = (RankReason.ABOVE_NOISE, RankReason.NONE_ABOVE_NOISE)
 LEAST_QUOTED_DEG = 0.001
 MOST_QUOTED = 100.0
@@ -165,12 +166,17 @@ def _joined(what: str, figure: str | None) -> str:
 
 
 def _remedy_of_all(judged: Assessment, concerned: list[int]) -> str:
-    """Return the remedy that the most demanding of some modes needs."""
+    """Return the remedy that the most demanding of some modes needs: one without a figure asks for most."""
     remedies = [judged.judgements[i - 1] for i in concerned if remedy_words(judged)[i - 1]]
     if not remedies:
         return ""
-    worst = max(remedies, key=lambda found: (found.remedy.factor or 0.0, found.remedy.degrees or 0.0))
+    worst = max(remedies, key=lambda found: _figure(found.remedy))
     return f" ({_remedy(worst.remedy, worst.verdict)})"
+
+
+def _figure(remedy: Remedy) -> float:
+    figure = remedy.degrees if remedy.factor is None else remedy.factor
+    return math.inf if figure is None else figure
 
 
 def _rank_remarks(judged: Assessment) -> list[str]:
@@ -179,7 +185,7 @@ def _rank_remarks(judged: Assessment) -> list[str]:
         return []  # said already
     if choice.reason is RankReason.WITHIN_ANGLE and more > choice.rank:
         return [f"one more read is expected to bring {more} modes within {format_angle(choice.asked)}"]
-    if choice.reason in (RankReason.GROUP_WHOLE, RankReason.GROUP_OPEN, RankReason.FEWER_MODES) or not choice.met:
+    if choice.reason in TOLD_REASONS or not choice.met:
         return [f"{choice.rank} mode{'' if choice.rank == 1 else 's'}: {choice.reason.value}"]
     return []
 

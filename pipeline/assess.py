@@ -245,8 +245,8 @@ def _choice(
     if choice.rank <= most:
         return choice
     if isinstance(asked, int):
-        return replace(choice, rank=min(asked, count), reason=RankReason.GROUP_OPEN)
-    return replace(choice, rank=most, met=False, reason=RankReason.FEWER_MODES)
+        return replace(choice, rank=min(asked, count), reason=RankReason.GROUP_LONG)
+    return replace(choice, rank=most, met=False, reason=RankReason.NO_ROOM)
 
 
 def _rule(asked: Any, above_noise: int) -> RankRule:

@@ -156,6 +156,7 @@ def channel_summary(finding: Finding) -> bytes:
     captured = captured_by_channel(finding.factors, finding.held)
     share = np.divide(captured, energy, out=np.full(len(energy), np.nan), where=energy > finding.factors.floor**2)
     spread = np.sqrt(summary.energy / max(1, summary.n - 1)) / finding.factor
+    still = "nothing left when the background is removed" if finding.removal.rows else "constant"
     columns = {
         "channel": Column(list(table.names), "", "channel name"),
         "samples": Column(summary.n - summary.gaps, "", "valid samples"),
@@ -166,7 +167,7 @@ def channel_summary(finding: Finding) -> bytes:
         "max": Column(summary.high, "the channel's", "largest value"),
         "energy": Column(energy, f"{finding.unit}^2", "sum of squares of prepared values, background removed"),
         "captured_fraction": Column(share, "", "share of that energy which the written modes hold; exact"),
-        "note": Column(["constant" if e <= finding.factors.floor**2 else "" for e in energy], "", "remarks"),
+        "note": Column([still if e <= finding.factors.floor**2 else "" for e in energy], "", "remarks"),
     }
     return to_parquet(columns)
 
